@@ -1,0 +1,49 @@
+// The settings file: one YAML document, checked whole before anything uses it. Every problem is reported
+// at once, with file, line, column and key.
+#pragma once
+
+#include <filesystem>
+#include <string>
+#include <vector>
+
+#include "daemon/domain/book_settings.h"
+#include "daemon/domain/instrument.h"
+#include "daemon/domain/result.h"
+
+namespace nightweigh::settings {
+
+// Where a server listens: TCP on a loopback address, a Unix-domain socket, or nowhere.
+struct Endpoint {
+  enum class Kind { off, tcp, unix_socket } kind = Kind::off;
+  std::string address;         // tcp: "127.0.0.1" or "::1"
+  std::uint16_t port = 0;      // tcp: 0 = any free port
+  std::filesystem::path path;  // unix_socket
+};
+
+struct ServiceSettings {
+  std::filesystem::path data_dir;    // absolute; relative paths in the file are relative to the file's folder
+  Endpoint http;
+  Endpoint feed_socket;
+  std::filesystem::path drop_dir;    // absolute; empty = off
+  std::filesystem::path outbox_dir;  // absolute; empty = off
+  std::string log_level = "info";    // trace | debug | info | warn | error
+};
+
+struct Settings {
+  std::filesystem::path file;
+  ServiceSettings service;
+  std::vector<Instrument> instruments;
+  std::vector<BookSettings> books;
+};
+
+// Reads and checks a file. Errors are in the order of the file.
+ResultOrErrors<Settings> load(const std::filesystem::path& file);
+
+// The same for text at hand; `file` only names it in errors and anchors relative paths.
+ResultOrErrors<Settings> parse(const std::string& text, const std::filesystem::path& file);
+
+// Makes book.resolved_text and book.digest from the other members: canonical JSON (keys sorted, no
+// spaces, decimals as strings, doubles in shortest round-trip form) and its SHA-256.
+void resolve(BookSettings& book);
+
+}  // namespace nightweigh::settings
