@@ -3,6 +3,8 @@
 #include <array>
 #include <cstdio>
 
+#include "daemon/domain/utf8.h"
+
 namespace nightweigh {
 
 std::string Error::message() const {
@@ -10,7 +12,11 @@ std::string Error::message() const {
   if (!text.empty()) text += ": ";
   text += problem;
   if (!value.empty()) text += ": \"" + value + "\"";
-  if (!remedy.empty()) text += ". " + remedy;
+  if (!remedy.empty()) {
+    text += ". " + remedy;
+    char& first = text[text.size() - remedy.size()];  // remedies are kept in lower case; here one ends a text
+    if (first >= 'a' && first <= 'z') first = static_cast<char>(first - 'a' + 'A');
+  }
   return text;
 }
 
@@ -38,45 +44,30 @@ const char* name_of(ErrorKind kind) {
   return "bad_input";
 }
 
-namespace {
-
-// Length of the well-formed UTF-8 sequence at text[at], or 0 (RFC 3629, table 3-7 of Unicode).
-std::size_t utf8_length(const std::string& text, std::size_t at) {
-  const auto byte = [&](std::size_t i) {
-    return i < text.size() ? static_cast<unsigned char>(text[i]) : static_cast<unsigned char>(0);
-  };
-  const auto tail = [&](std::size_t i) { return byte(i) >= 0x80 && byte(i) <= 0xBF; };
-  const unsigned char first = byte(at), second = byte(at + 1);
-  if (first < 0x80) return 1;
-  if (first >= 0xC2 && first <= 0xDF) return tail(at + 1) ? 2 : 0;
-  if (first >= 0xE0 && first <= 0xEF) {
-    const bool second_fits = tail(at + 1) && !(first == 0xE0 && second < 0xA0) && !(first == 0xED && second > 0x9F);
-    return second_fits && tail(at + 2) ? 3 : 0;
-  }
-  if (first >= 0xF0 && first <= 0xF4) {
-    const bool second_fits = tail(at + 1) && !(first == 0xF0 && second < 0x90) && !(first == 0xF4 && second > 0x8F);
-    return second_fits && tail(at + 2) && tail(at + 3) ? 4 : 0;
-  }
-  return 0;
-}
-
-}  // namespace
-
 std::string shown(const std::string& text, std::size_t max_bytes) {
   std::string out;
   for (std::size_t i = 0; i < text.size();) {
-    if (out.size() >= max_bytes) return out + "...";
     const std::size_t length = utf8_length(text, i);
     const auto byte = static_cast<unsigned char>(text[i]);
-    if (length == 0 || byte < 0x20 || byte == 0x7F) {
+    // U+0080 to U+009F are control characters too; some terminals act on them.
+    const bool second_control = length == 2 && byte == 0xC2 && static_cast<unsigned char>(text[i + 1]) < 0xA0;
+    std::string piece;
+    if (length == 0 || byte < 0x20 || byte == 0x7F || second_control) {
       std::array<char, 5> escaped{};
       std::snprintf(escaped.data(), escaped.size(), "\\x%02x", byte);
-      out += escaped.data();
+      piece = escaped.data();
       ++i;
+      if (second_control) {
+        std::snprintf(escaped.data(), escaped.size(), "\\x%02x", static_cast<unsigned char>(text[i]));
+        piece += escaped.data();
+        ++i;
+      }
     } else {
-      out.append(text, i, length);
+      piece = text.substr(i, length);
       i += length;
     }
+    if (out.size() + piece.size() > max_bytes) return out + "...";
+    out += piece;
   }
   return out;
 }

@@ -23,8 +23,14 @@ struct Acknowledgement {
   std::vector<BookAnswer> books;
   std::vector<RowError> errors;
 
-  // One line of JSON without a newline, as in the contract.
+  // One line of JSON without a newline, as in the contract; each error also carries its "kind".
   std::string to_json() const;
 };
+
+// "taken", "known" or "refused".
+const char* name_of(Acknowledgement::Status status);
+
+// A refused batch: nothing of it was stored.
+Acknowledgement refusal(std::string digest, std::vector<RowError> errors);
 
 }  // namespace nightweigh::feed

@@ -2,6 +2,7 @@
 // at once, with file, line, column and key.
 #pragma once
 
+#include <cstdint>
 #include <filesystem>
 #include <string>
 #include <vector>
@@ -21,11 +22,13 @@ struct Endpoint {
 };
 
 struct ServiceSettings {
-  std::filesystem::path data_dir;    // absolute; relative paths in the file are relative to the file's folder
+  // Relative paths in the file are taken from the file's folder (data_dir, calendars) or from data_dir
+  // (sockets, drop_dir, outbox_dir); here all are absolute.
+  std::filesystem::path data_dir;
   Endpoint http;
   Endpoint feed_socket;
-  std::filesystem::path drop_dir;    // absolute; empty = off
-  std::filesystem::path outbox_dir;  // absolute; empty = off
+  std::filesystem::path drop_dir;    // empty = off
+  std::filesystem::path outbox_dir;  // empty = off
   std::string log_level = "info";    // trace | debug | info | warn | error
 };
 
@@ -36,14 +39,17 @@ struct Settings {
   std::vector<BookSettings> books;
 };
 
-// Reads and checks a file. Errors are in the order of the file.
+// Reads and checks a file, and resolve()s each book. Errors are in the order of the file, each with its
+// place like "nightweigh.yaml:12:5 books[0].gate.extra_gain". A file has at most 1 MB, 16 levels of
+// nesting, 20,000 instruments, 500 books and 1,000 instruments a book.
 ResultOrErrors<Settings> load(const std::filesystem::path& file);
 
 // The same for text at hand; `file` only names it in errors and anchors relative paths.
 ResultOrErrors<Settings> parse(const std::string& text, const std::filesystem::path& file);
 
 // Makes book.resolved_text and book.digest from the other members: canonical JSON (keys sorted, no
-// spaces, decimals as strings, doubles in shortest round-trip form) and its SHA-256.
+// spaces, decimals as strings, doubles in a form that reads back as the same double) and its SHA-256.
+// Weights left out for constant_mix are written as the equal weights that they stand for.
 void resolve(BookSettings& book);
 
 }  // namespace nightweigh::settings

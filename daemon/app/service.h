@@ -1,0 +1,13 @@
+// `nightweigh serve`: the parts put together. Threads: one network thread (this one), one writer thread
+// that owns the store, one reader thread, a pool for the nights.
+#pragma once
+
+#include "daemon/domain/result.h"
+#include "daemon/settings/settings.h"
+
+namespace nightweigh::app {
+
+// Runs until SIGTERM or SIGINT. On a failed start: what was wrong.
+Result<void> serve(const settings::Settings& settings);
+
+}  // namespace nightweigh::app
