@@ -14,6 +14,8 @@ void add_serve(CLI::App& program, int& exit_code) {
   auto common = std::make_shared<commands::Common>();
   CLI::App* command = program.add_subcommand("serve", "run the service until it is told to stop");
   commands::add_settings_option(*command, *common);
+  command->add_flag("--json", common->json,
+                    "log to standard error; one line of JSON on standard output when ready");
   command->footer("Example:\n  nightweigh serve --settings nightweigh.yaml");
   command->callback([common, &exit_code] {
     const std::optional<settings::Settings> settings = commands::settings_or_complain(*common);
@@ -21,10 +23,11 @@ void add_serve(CLI::App& program, int& exit_code) {
       exit_code = commands::wrong_use;
       return;
     }
-    const Result<void> served = app::serve(*settings);
+    const Result<void> served = app::serve(*settings, common->json);
     if (!served) {
-      exit_code = commands::fail(
-          served.error(), served.error().kind == ErrorKind::bad_settings ? commands::wrong_use : commands::refused);
+      exit_code =
+          commands::fail(served.error(), served.error().kind == ErrorKind::bad_settings ? commands::wrong_use
+                                                                                        : commands::refused);
     }
   });
 }
@@ -33,8 +36,10 @@ void add_serve(CLI::App& program, int& exit_code) {
 
 int main(int argc, char** argv) {
   CLI::App program(
-      "nightweigh takes the closes of each day, moves the target weights of rule-based books along, and proposes\n"
-      "whole-share orders only when the expected saving outweighs the cost of trading. It never sends an order.");
+      "nightweigh takes the closes of each day, moves the target weights of rule-based books along, and "
+      "proposes\n"
+      "whole-share orders only when the expected saving outweighs the cost of trading. It never sends an "
+      "order.");
   program.require_subcommand(1);
   program.set_version_flag("--version", NIGHTWEIGH_VERSION);
   program.get_formatter()->column_width(28);

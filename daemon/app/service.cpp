@@ -16,6 +16,7 @@
 #include <boost/asio/thread_pool.hpp>
 #include <boost/asio/use_awaitable.hpp>
 #include <csignal>
+#include <iostream>
 #include <nlohmann/json.hpp>
 #include <optional>
 #include <thread>
@@ -40,12 +41,18 @@ namespace asio = boost::asio;
 constexpr auto stop_limit = std::chrono::seconds(10);
 constexpr auto retry_after_trouble = std::chrono::seconds(15);
 
+spdlog::sink_ptr console(bool on_standard_error) {
+  if (on_standard_error) return std::make_shared<spdlog::sinks::stderr_color_sink_mt>();
+  return std::make_shared<spdlog::sinks::stdout_color_sink_mt>();
+}
+
 class Service {
  public:
-  explicit Service(const settings::Settings& settings)
+  Service(const settings::Settings& settings, bool as_json)
       : settings_(settings),
+        as_json_(as_json),
         endpoints_file_(settings.service.data_dir / "endpoints.json"),
-        log_(std::make_shared<spdlog::logger>("nightweigh", std::make_shared<spdlog::sinks::stdout_color_sink_mt>())) {
+        log_(std::make_shared<spdlog::logger>("nightweigh", console(as_json))) {
     log_->set_level(spdlog::level::from_str(settings.service.log_level));
     log_->flush_on(spdlog::level::info);
   }
@@ -83,6 +90,7 @@ class Service {
     asio::post(network_, [this, &answers] {
       answers.set_ready(true);
       sd_notify(0, "READY=1\nSTATUS=taking closes");
+      if (as_json_) std::cout << endpoints().dump() << std::endl;
       log_->info("ready: http {} feed {} drop {}", http_->endpoint(), socket_ ? socket_->endpoint() : "off",
                  drop_ ? settings_.service.drop_dir.string() : "off");
     });
@@ -142,7 +150,8 @@ class Service {
     http_settings.port = service.http.port;
     http_settings.path = service.http.path;
     http_settings.report = report;
-    Result<std::unique_ptr<http::Server>> http = http::Server::open(network_, http_settings, std::move(handler));
+    Result<std::unique_ptr<http::Server>> http =
+        http::Server::open(network_, http_settings, std::move(handler));
     if (!http) return failure(http.error());
     http_ = std::move(*http);
 
@@ -165,10 +174,12 @@ class Service {
     return {};
   }
 
+  nlohmann::ordered_json endpoints() const {
+    return {{"http", http_->endpoint()}, {"feed", socket_ ? socket_->endpoint() : std::string()}};
+  }
+
   Result<void> write_endpoints() {
-    const nlohmann::ordered_json endpoints{{"http", http_->endpoint()},
-                                           {"feed", socket_ ? socket_->endpoint() : std::string()}};
-    return platform::write_file_atomically(endpoints_file_, endpoints.dump() + "\n");
+    return platform::write_file_atomically(endpoints_file_, endpoints().dump() + "\n");
   }
 
   void stop() {
@@ -197,6 +208,7 @@ class Service {
   }
 
   const settings::Settings& settings_;
+  bool as_json_;
   std::filesystem::path endpoints_file_;
   std::shared_ptr<spdlog::logger> log_;
   platform::SystemClock clock_;
@@ -213,6 +225,8 @@ class Service {
 
 }  // namespace
 
-Result<void> serve(const settings::Settings& settings) { return Service(settings).run(); }
+Result<void> serve(const settings::Settings& settings, bool as_json) {
+  return Service(settings, as_json).run();
+}
 
 }  // namespace nightweigh::app

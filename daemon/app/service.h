@@ -7,7 +7,8 @@
 
 namespace nightweigh::app {
 
-// Runs until SIGTERM or SIGINT. On a failed start: what was wrong.
-Result<void> serve(const settings::Settings& settings);
+// Runs until SIGTERM or SIGINT. On a failed start: what was wrong. as_json: the log goes to standard error,
+// and standard output gets one line of JSON when the service is ready: where it listens.
+Result<void> serve(const settings::Settings& settings, bool as_json = false);
 
 }  // namespace nightweigh::app

@@ -2,6 +2,7 @@
 
 #include <algorithm>
 #include <array>
+#include <cmath>
 #include <cstdio>
 #include <iostream>
 
@@ -56,7 +57,8 @@ Result<RunningEndpoints> running_endpoints(const settings::Settings& settings) {
   constexpr std::size_t bytes_max = 64 << 10;
   Result<std::string> text = platform::read_file(file, bytes_max);
   if (!text) {
-    return failure({ErrorKind::not_found, file.string(), "the service does not seem to run with these settings", "",
+    return failure({ErrorKind::not_found, file.string(),
+                    "the service does not seem to run with these settings", "",
                     "start it with: nightweigh serve --settings " + settings.file.string()});
   }
   const nlohmann::json endpoints = nlohmann::json::parse(*text, nullptr, false);
@@ -76,15 +78,16 @@ Result<std::string> ask(const settings::Settings& settings, const std::string& t
   const nlohmann::json problem = nlohmann::json::parse(answer->body, nullptr, false);
   const std::string detail = problem.is_object() ? problem.value("detail", "") : shown(answer->body);
   return failure({answer->status == 404 ? ErrorKind::not_found : ErrorKind::bad_input, target,
-                  detail.empty() ? "the service answered " + std::to_string(answer->status) : detail, "", ""});
+                  detail.empty() ? "the service answered " + std::to_string(answer->status) : detail, "",
+                  ""});
 }
 
 namespace {
 
 // Columns that a UTF-8 text takes on a terminal, one a code point.
 std::size_t width(const std::string& text) {
-  return static_cast<std::size_t>(
-      std::count_if(text.begin(), text.end(), [](char c) { return (static_cast<unsigned char>(c) & 0xC0) != 0x80; }));
+  return static_cast<std::size_t>(std::count_if(
+      text.begin(), text.end(), [](char c) { return (static_cast<unsigned char>(c) & 0xC0) != 0x80; }));
 }
 
 }  // namespace
@@ -135,6 +138,15 @@ std::string number(const nlohmann::json& value, int digits) {
   if (!value.is_number()) return "-";
   std::array<char, 64> text{};
   std::snprintf(text.data(), text.size(), "%.*f", digits, value.get<double>());
+  return text.data();
+}
+
+std::string amount(const nlohmann::json& value) {
+  if (!value.is_number()) return "-";
+  const double figure = value.get<double>();
+  if (figure == 0 || std::abs(figure) >= 0.1) return number(value, 2);
+  std::array<char, 64> text{};
+  std::snprintf(text.data(), text.size(), "%.2g", figure);
   return text.data();
 }
 

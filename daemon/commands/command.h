@@ -53,6 +53,8 @@ std::string wrapped(const std::string& text, const std::string& indent = "");
 // Number members of answers; "-" for null and absent ones.
 std::string percent(const nlohmann::json& weight, int digits = 2);
 std::string number(const nlohmann::json& value, int digits);
+// Two significant digits below 0.1, else two decimals: small costs must not look like none.
+std::string amount(const nlohmann::json& value);
 std::string text_or_dash(const nlohmann::json& value);
 
 }  // namespace nightweigh::commands

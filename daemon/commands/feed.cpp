@@ -1,3 +1,4 @@
+#include <algorithm>
 #include <iostream>
 #include <memory>
 
@@ -25,7 +26,8 @@ void print(const std::string& file, const nlohmann::json& answer) {
     } else {
       std::cout << "no new night\n";
     }
-    for (const nlohmann::json& reason : book["reasons"]) std::cout << wrapped("waiting: " + reason.get<std::string>(), "    ");
+    for (const nlohmann::json& reason : book["reasons"])
+      std::cout << wrapped(reason.get<std::string>(), "    ");
   }
 }
 
@@ -41,15 +43,19 @@ void print_errors(const std::string& file, const nlohmann::json& errors) {
   }
 }
 
-bool is_json(const std::string& file) { return file.size() > 5 && file.substr(file.size() - 5) == ".json"; }
+bool is_json(const std::string& file) {
+  return file.size() > 5 && file.substr(file.size() - 5) == ".json";
+}
 
 int feed_file(const std::string& endpoint, const std::string& file, bool json) {
   const feed::Limits limits;
   Result<std::string> bytes = platform::read_file(file, limits.bytes_max);
   if (!bytes) return fail(bytes.error());
-  const feed::BatchLine batch = is_json(file) ? feed::json_to_line(*bytes, limits) : feed::csv_to_line(*bytes, limits);
+  const feed::BatchLine batch =
+      is_json(file) ? feed::json_to_line(*bytes, limits) : feed::csv_to_line(*bytes, limits);
   if (!batch.ok()) {
-    for (const feed::RowError& error : batch.errors) std::cerr << "nightweigh: " << file << ": " << error.message() << "\n";
+    for (const feed::RowError& error : batch.errors)
+      std::cerr << "nightweigh: " << file << ": " << error.message() << "\n";
     return refused;
   }
   Result<std::string> line = feed::send_line(endpoint, batch.line);
@@ -57,12 +63,17 @@ int feed_file(const std::string& endpoint, const std::string& file, bool json) {
   if (json) std::cout << *line << "\n";
   const nlohmann::json answer = nlohmann::json::parse(*line, nullptr, false);
   if (!answer.is_object()) {
-    return fail({ErrorKind::bad_input, endpoint, "answered something that is no acknowledgement", shown(*line),
-                 "is it the feed socket of nightweigh?"});
+    return fail({ErrorKind::bad_input, endpoint, "answered something that is no acknowledgement",
+                 shown(*line), "is it the feed socket of nightweigh?"});
   }
   if (!json) print(file, answer);
   print_errors(file, answer["errors"]);
-  return answer["status"] == "refused" ? refused : done;
+  // A taken batch after which a book waits wants somebody's attention; a known one tells nothing new.
+  const nlohmann::json& books = answer["books"];
+  const bool attention = answer["status"] == "taken" &&
+                         std::any_of(books.begin(), books.end(),
+                                     [](const nlohmann::json& book) { return !book["reasons"].empty(); });
+  return answer["status"] == "refused" || attention ? refused : done;
 }
 
 int run(const Common& common, const std::vector<std::string>& files) {
@@ -71,12 +82,14 @@ int run(const Common& common, const std::vector<std::string>& files) {
   const Result<RunningEndpoints> endpoints = running_endpoints(*settings);
   if (!endpoints) return fail(endpoints.error());
   if (endpoints->feed.empty()) {
-    return fail({ErrorKind::not_found, "service.feed_socket", "is off", "",
-                 "turn it on in the settings, or move the files into " + settings->service.drop_dir.string()});
+    return fail(
+        {ErrorKind::not_found, "service.feed_socket", "is off", "",
+         "turn it on in the settings, or move the files into " + settings->service.drop_dir.string()});
   }
   // One refused file does not keep the others from being tried; the exit code tells.
   int worst = done;
-  for (const std::string& file : files) worst = std::max(worst, feed_file(endpoints->feed, file, common.json));
+  for (const std::string& file : files)
+    worst = std::max(worst, feed_file(endpoints->feed, file, common.json));
   return worst;
 }
 
@@ -85,7 +98,8 @@ int run(const Common& common, const std::vector<std::string>& files) {
 void add_feed(CLI::App& program, int& exit_code) {
   auto common = std::make_shared<Common>();
   auto files = std::make_shared<std::vector<std::string>>();
-  CLI::App* command = program.add_subcommand("feed", "send files of closes (CSV or .json) to the running service");
+  CLI::App* command =
+      program.add_subcommand("feed", "send files of closes (CSV or .json) to the running service");
   add_settings_option(*command, *common);
   add_json_option(*command, *common);
   command->add_option("CLOSES", *files, "files, sent in this order, each a batch")->required();

@@ -23,7 +23,9 @@ std::string endpoint_text(const settings::Endpoint& endpoint) {
   return "";
 }
 
-std::string number_text(double value) { return json(value).dump(); }
+std::string number_text(double value) {
+  return json(value).dump();
+}
 
 // The rule with its parameters, in words.
 std::string rule_text(const BookSettings& book) {
@@ -34,7 +36,8 @@ std::string rule_text(const BookSettings& book) {
   }
   if (book.strategy.rule == "constant_mix") {
     std::string text = "constant_mix";
-    for (const auto& [line, weight] : book.strategy.weights) text += ", " + line + " " + percent(weight, 1) + " %";
+    for (const auto& [line, weight] : book.strategy.weights)
+      text += ", " + line + " " + percent(weight, 1) + " %";
     return book.strategy.weights.empty() ? text + ", equal weights" : text;
   }
   return book.strategy.rule + ": equal weights at the start, then the market moves them";
@@ -43,7 +46,8 @@ std::string rule_text(const BookSettings& book) {
 // Folders that are there must be folders; those that are missing are made at the start of the service.
 void inspect_folder(const std::filesystem::path& folder, const char* key, Errors& problems) {
   std::error_code code;
-  if (!folder.empty() && std::filesystem::exists(folder, code) && !std::filesystem::is_directory(folder, code)) {
+  if (!folder.empty() && std::filesystem::exists(folder, code) &&
+      !std::filesystem::is_directory(folder, code)) {
     problems.push_back({ErrorKind::storage, folder.string(), std::string(key) + " is no folder", "",
                         "name a folder, or move the file away"});
   }
@@ -106,18 +110,20 @@ int run(const Common& common) {
     std::cout << "settings  " << settings->file.string() << ": good\n"
               << "http      " << endpoint_text(settings->service.http) << "\n"
               << "feed      " << endpoint_text(settings->service.feed_socket) << "\n"
-              << "drop      " << (settings->service.drop_dir.empty() ? "off" : settings->service.drop_dir.string()) << "\n"
+              << "drop      "
+              << (settings->service.drop_dir.empty() ? "off" : settings->service.drop_dir.string()) << "\n"
               << "database  " << (settings->service.data_dir / "nightweigh.db").string()
               << (database.present ? "" : " (made at the first start)") << "\n\n";
     for (std::size_t i = 0; i < settings->books.size(); ++i) {
       const BookSettings& book = settings->books[i];
-      std::cout << "book " << book.name << ": " << book.instruments.size() << " instruments in " << book.currency
-                << ", from " << book.start.date.to_string() << ", fills "
-                << (book.execution_lag_nights == 1 ? "assumed at the next night's close" : "assumed at the same close")
+      std::cout << "book " << book.name << ": " << book.instruments.size() << " instruments in "
+                << book.currency << ", from " << book.start.date.to_string() << ", fills "
+                << (book.execution_lag_nights == 1 ? "assumed at the next night's close"
+                                                   : "assumed at the same close")
                 << "\n"
                 << wrapped("rule " + rule_text(book), "  ") << "  last night "
-                << text_or_dash(books[i]["last_night"]) << ", journal head " << text_or_dash(books[i]["journal_head"])
-                << "\n";
+                << text_or_dash(books[i]["last_night"]) << ", journal head "
+                << text_or_dash(books[i]["journal_head"]) << "\n";
     }
   }
   return problems.empty() ? static_cast<int>(done) : fail(problems, refused);
@@ -130,7 +136,8 @@ void add_inspect(CLI::App& program, int& exit_code) {
   CLI::App* command = program.add_subcommand("inspect", "check the settings, the database and the folders");
   add_settings_option(*command, *common);
   add_json_option(*command, *common);
-  command->footer("Every problem is said at once.\nExample:\n  nightweigh inspect --settings nightweigh.yaml");
+  command->footer(
+      "Every problem is said at once.\nExample:\n  nightweigh inspect --settings nightweigh.yaml");
   command->callback([common, &exit_code] { exit_code = run(*common); });
 }
 

@@ -41,9 +41,10 @@ int run(const Common& common, const Filter& filter) {
   std::vector<std::vector<std::string>> rows = {{"date", "verdict", ">saved bp/y", ">cost bp", ">payback d",
                                                  ">horizon d", ">turnover %", ">lines", "sheet", "hash"}};
   for (const nlohmann::json& row : page["rows"]) {
-    rows.push_back({row["date"], row["verdict"], number(row["growth_saved_bp_year"], 2), number(row["cost_bp"], 2),
+    rows.push_back({row["date"], row["verdict"], amount(row["growth_saved_bp_year"]), amount(row["cost_bp"]),
                     number(row["payback_days"], 0), number(row["horizon_days"], 0), percent(row["turnover"]),
-                    number(row["lines"], 0), text_or_dash(row["sheet"]), row["hash"].get<std::string>().substr(0, 12)});
+                    number(row["lines"], 0), text_or_dash(row["sheet"]),
+                    row["hash"].get<std::string>().substr(0, 12)});
   }
   std::cout << table(rows);
   if (filter.reasons) {
@@ -72,10 +73,12 @@ void add_log(CLI::App& program, int& exit_code) {
   command->add_option("--from", filter->from, "first date")->check(is_date);
   command->add_option("--to", filter->to, "last date")->check(is_date);
   command->add_option("--cursor", filter->cursor, "nights before this date")->check(is_date);
-  command->add_option("--verdict", filter->verdict, "only these")->check(CLI::IsMember({"move", "stay", "withheld"}));
+  command->add_option("--verdict", filter->verdict, "only these")
+      ->check(CLI::IsMember({"move", "stay", "withheld"}));
   command->add_option("--limit", filter->limit, "rows, 1 to 1000")->check(CLI::Range(1, 1000));
   command->add_flag("--reasons", filter->reasons, "the reason of each night under the table");
-  command->footer("Example:\n  nightweigh log --settings nightweigh.yaml --book harbour --verdict move --reasons");
+  command->footer(
+      "Example:\n  nightweigh log --settings nightweigh.yaml --book harbour --verdict move --reasons");
   command->callback([common, filter, &exit_code] { exit_code = run(*common, *filter); });
 }
 

@@ -21,10 +21,10 @@ int run(const std::string& folder, std::uint64_t seed, bool json) {
   }
   std::cout << "An invented market from seed " << seed << "; no price in it is the price of anything.\n"
             << "settings      " << written->settings.string() << "\n"
-            << "most closes   " << written->monthly.size() << " monthly files, from " << written->monthly.front().string()
-            << "\n"
-            << "last days     " << written->daily.size() << " daily files, from " << written->daily.front().string()
-            << "\n";
+            << "most closes   " << written->monthly.size() << " monthly files, from "
+            << written->monthly.front().string() << "\n"
+            << "last days     " << written->daily.size() << " daily files, from "
+            << written->daily.front().string() << "\n";
   return done;
 }
 

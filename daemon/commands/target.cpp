@@ -22,7 +22,8 @@ int run(const Common& common) {
   }
   const nlohmann::json target = nlohmann::json::parse(*body);
   std::cout << target["book"].get<std::string>() << ", night of " << target["date"].get<std::string>()
-            << (target["stale"].get<bool>() ? " (stale: a later night is due; see attention of the book)" : "")
+            << (target["stale"].get<bool>() ? " (stale: a later night is due; see attention of the book)"
+                                            : "")
             << "\n\n"
             << wrapped(target["reason"], "  ") << "\n";
   const nlohmann::json& emitted = target["emitted"];

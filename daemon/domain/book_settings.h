@@ -21,9 +21,9 @@ struct StartSettings {
 };
 
 struct CashSettings {
-  bool in_mix = false;       // true: cash is a line that the strategy weighs
-  double reserve = 0.0;      // share of the book that stays in cash when in_mix is false; [0, 1)
-  Decimal yearly_rate;       // simple interest a year on cash, by calendar days / 365; > -1
+  bool in_mix = false;   // true: cash is a line that the strategy weighs
+  double reserve = 0.0;  // share of the book that stays in cash when in_mix is false; [0, 1)
+  Decimal yearly_rate;   // simple interest a year on cash, by calendar days / 365; > -1
 };
 
 struct StrategySettings {
@@ -33,10 +33,10 @@ struct StrategySettings {
 };
 
 struct GateSettings {
-  double extra_gain = 0.1;                   // the horizon must exceed the payback by this share
+  double extra_gain = 0.1;                          // the horizon must exceed the payback by this share
   std::optional<double> payback_days_max = 1260.0;  // nullopt = no limit (null in the settings)
-  double half_life_days = 250.0;             // of the covariation
-  bool always = false;                       // trade to the wanted weights every night, whatever it costs
+  double half_life_days = 250.0;                    // of the covariation
+  bool always = false;  // trade to the wanted weights every night, whatever it costs
 };
 
 struct LineCosts {

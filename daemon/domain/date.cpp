@@ -20,9 +20,11 @@ std::optional<int> digits(std::string_view text) {
 
 std::optional<Date> Date::parse(std::string_view text) {
   if (text.size() != 10 || text[4] != '-' || text[7] != '-') return std::nullopt;
-  const auto year = digits(text.substr(0, 4)), month = digits(text.substr(5, 2)), day = digits(text.substr(8, 2));
+  const auto year = digits(text.substr(0, 4)), month = digits(text.substr(5, 2)),
+             day = digits(text.substr(8, 2));
   if (!year || !month || !day || *year < 1900 || *year > 2199) return std::nullopt;
-  const std::chrono::year_month_day date{std::chrono::year(*year), std::chrono::month(static_cast<unsigned>(*month)),
+  const std::chrono::year_month_day date{std::chrono::year(*year),
+                                         std::chrono::month(static_cast<unsigned>(*month)),
                                          std::chrono::day(static_cast<unsigned>(*day))};
   if (!date.ok()) return std::nullopt;
   return Date(std::chrono::sys_days(date));

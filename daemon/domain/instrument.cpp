@@ -18,11 +18,13 @@ bool is_instrument_id(std::string_view text) {
 
 int minor_units(std::string_view currency) {
   // Only the exceptions; ISO 4217 gives 2 to every other currency that trades.
-  static constexpr std::array none = {"JPY", "KRW", "CLP", "ISK", "VND", "PYG", "UGX", "XAF", "XOF", "XPF",
-                                      "BIF", "DJF", "GNF", "KMF", "RWF", "VUV", "UYI"};
+  static constexpr std::array none = {"JPY", "KRW", "CLP", "ISK", "VND", "PYG", "UGX", "XAF", "XOF",
+                                      "XPF", "BIF", "DJF", "GNF", "KMF", "RWF", "VUV", "UYI"};
   static constexpr std::array three = {"BHD", "IQD", "JOD", "KWD", "LYD", "OMR", "TND"};
   static constexpr std::array four = {"CLF", "UYW"};
-  const auto in = [&](const auto& list) { return std::find(list.begin(), list.end(), currency) != list.end(); };
+  const auto in = [&](const auto& list) {
+    return std::find(list.begin(), list.end(), currency) != list.end();
+  };
   if (in(none)) return 0;
   if (in(three)) return 3;
   if (in(four)) return 4;
@@ -30,7 +32,8 @@ int minor_units(std::string_view currency) {
 }
 
 bool is_currency_code(std::string_view text) {
-  return text.size() == 3 && std::all_of(text.begin(), text.end(), [](char c) { return c >= 'A' && c <= 'Z'; });
+  return text.size() == 3 &&
+         std::all_of(text.begin(), text.end(), [](char c) { return c >= 'A' && c <= 'Z'; });
 }
 
 }  // namespace nightweigh

@@ -9,15 +9,15 @@
 namespace nightweigh {
 
 enum class ErrorKind {
-  bad_input,      // a batch, a line, a request that breaks the format's rules
-  bad_settings,   // the settings file
-  conflict,       // contradicts what is already stored
-  not_found,      //
-  not_built,      // a feature that this version does not have; refused by name, never ignored
-  limit,          // larger than a stated limit
-  storage,        // the database or the file system said no
-  corrupted,      // stored bytes are not what their digest says
-  busy,           // somebody else holds it
+  bad_input,     // a batch, a line, a request that breaks the format's rules
+  bad_settings,  // the settings file
+  conflict,      // contradicts what is already stored
+  not_found,     //
+  not_built,     // a feature that this version does not have; refused by name, never ignored
+  limit,         // larger than a stated limit
+  storage,       // the database or the file system said no
+  corrupted,     // stored bytes are not what their digest says
+  busy,          // somebody else holds it
 };
 
 struct Error {
@@ -39,7 +39,9 @@ using Result = tl::expected<T, Error>;
 template <class T>
 using ResultOrErrors = tl::expected<T, Errors>;
 
-inline tl::unexpected<Error> failure(Error error) { return tl::unexpected<Error>(std::move(error)); }
+inline tl::unexpected<Error> failure(Error error) {
+  return tl::unexpected<Error>(std::move(error));
+}
 
 // The wire name of a kind: "bad_input", ...
 const char* name_of(ErrorKind kind);

@@ -9,7 +9,11 @@ std::string RowError::message() const {
   if (text.empty()) text = "the batch";
   text += ": " + problem;
   if (!value.empty()) text += ": \"" + value + "\"";
-  if (!remedy.empty()) text += ". " + remedy;
+  if (!remedy.empty()) {
+    text += ". " + remedy;
+    char& first = text[text.size() - remedy.size()];
+    if (first >= 'a' && first <= 'z') first = static_cast<char>(first - 'a' + 'A');
+  }
   return text;
 }
 

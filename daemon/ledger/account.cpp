@@ -44,7 +44,8 @@ TradeCash trade_cash(const Decimal& quantity, const TradeTerms& terms) {
   return out;
 }
 
-void open_account(Account& account, std::vector<Row>& rows, const Decimal& cash, std::vector<Decimal> quantities) {
+void open_account(Account& account, std::vector<Row>& rows, const Decimal& cash,
+                  std::vector<Decimal> quantities) {
   account.cash = Decimal();
   account.quantities.assign(quantities.size(), Decimal());
   if (!cash.is_zero()) book(account, rows, {Cause::opening, std::nullopt, Decimal(), std::nullopt, cash});
@@ -55,8 +56,8 @@ void open_account(Account& account, std::vector<Row>& rows, const Decimal& cash,
   }
 }
 
-void apply_split(Account& account, std::vector<Row>& rows, std::size_t line, const Decimal& ratio, const Decimal& close,
-                 const Decimal& smallest, int minor_units) {
+void apply_split(Account& account, std::vector<Row>& rows, std::size_t line, const Decimal& ratio,
+                 const Decimal& close, const Decimal& smallest, int minor_units) {
   const Decimal before = account.quantities[line];
   if (before.is_zero()) return;
   const Decimal exact = before * ratio;
@@ -76,8 +77,8 @@ void apply_dividend(Account& account, std::vector<Row>& rows, std::size_t line, 
 
 void apply_interest(Account& account, std::vector<Row>& rows, const Decimal& yearly_rate, int calendar_days,
                     int minor_units) {
-  const Decimal cash =
-      multiply_divide_half_even(account.cash * yearly_rate, Decimal(calendar_days), Decimal(365), minor_units);
+  const Decimal cash = multiply_divide_half_even(account.cash * yearly_rate, Decimal(calendar_days),
+                                                 Decimal(365), minor_units);
   if (!cash.is_zero()) book(account, rows, {Cause::interest, std::nullopt, Decimal(), std::nullopt, cash});
 }
 
@@ -85,7 +86,8 @@ void apply_trade(Account& account, std::vector<Row>& rows, std::size_t line, con
                  const TradeTerms& terms) {
   const TradeCash cash = trade_cash(quantity, terms);
   book(account, rows, {Cause::fill, line, quantity, cash.price, cash.proceeds});
-  if (!cash.commission.is_zero()) book(account, rows, {Cause::fee, line, Decimal(), std::nullopt, -cash.commission});
+  if (!cash.commission.is_zero())
+    book(account, rows, {Cause::fee, line, Decimal(), std::nullopt, -cash.commission});
 }
 
 Decimal net_asset_value(const Account& account, const std::vector<Decimal>& closes) {
@@ -113,7 +115,8 @@ void check_books(const Account& before, const Account& now, const std::vector<Ro
     }
   }
   if (cash != now.cash) throw std::logic_error("ledger L1: cash is not the sum of its rows");
-  if (quantities != now.quantities) throw std::logic_error("ledger L1: a position is not the sum of its rows");
+  if (quantities != now.quantities)
+    throw std::logic_error("ledger L1: a position is not the sum of its rows");
   if (value != net_asset_value(now, closes_now)) {
     throw std::logic_error("ledger L3: net asset value is not what the closes and the rows made of it");
   }

@@ -53,10 +53,11 @@ struct TradeCash {
 TradeCash trade_cash(const Decimal& quantity, const TradeTerms& terms);
 
 // Each applies one event to the account and appends its rows.
-void open_account(Account& account, std::vector<Row>& rows, const Decimal& cash, std::vector<Decimal> quantities);
+void open_account(Account& account, std::vector<Row>& rows, const Decimal& cash,
+                  std::vector<Decimal> quantities);
 // New quantity = old * ratio; what is smaller than `smallest` is paid in cash at `close`.
-void apply_split(Account& account, std::vector<Row>& rows, std::size_t line, const Decimal& ratio, const Decimal& close,
-                 const Decimal& smallest, int minor_units);
+void apply_split(Account& account, std::vector<Row>& rows, std::size_t line, const Decimal& ratio,
+                 const Decimal& close, const Decimal& smallest, int minor_units);
 void apply_dividend(Account& account, std::vector<Row>& rows, std::size_t line, const Decimal& per_share,
                     int minor_units);
 // Simple interest for calendar_days / 365 of yearly_rate on the cash at hand.

@@ -8,7 +8,9 @@ namespace nightweigh::night {
 namespace {
 
 // bp to a fraction, exactly.
-Decimal fraction(const Decimal& bp) { return bp * Decimal::scaled(1, 4); }
+Decimal fraction(const Decimal& bp) {
+  return bp * Decimal::scaled(1, 4);
+}
 
 }  // namespace
 
@@ -23,8 +25,8 @@ Decimal quantity_given_back(const Instrument& instrument, const Decimal& close, 
   if (instrument.is_fractional()) {
     return lot + multiply_divide_down(short_by, Decimal(1), close, fractional_quantity_scale);
   }
-  const Decimal lots = multiply_divide_down(short_by, Decimal(1),
-                                            lot * close * Decimal(static_cast<std::int64_t>(buys)), 0);
+  const Decimal lots =
+      multiply_divide_down(short_by, Decimal(1), lot * close * Decimal(static_cast<std::int64_t>(buys)), 0);
   return lot * std::max(Decimal(1), lots);
 }
 
@@ -34,8 +36,8 @@ ledger::TradeTerms trade_terms(const BookSettings& settings, std::size_t line, c
 }
 
 Decimal estimated_cost(const BookSettings& settings, const Order& order) {
-  const Decimal rate =
-      fraction(settings.costs[order.line].half_spread_bp) + fraction(settings.costs[order.line].commission_bp);
+  const Decimal rate = fraction(settings.costs[order.line].half_spread_bp) +
+                       fraction(settings.costs[order.line].commission_bp);
   return (order.quantity * order.reference_close * rate).rounded_half_even(minor_units(settings.currency));
 }
 
@@ -43,8 +45,8 @@ void apply_corporate_actions(BookState& state, std::vector<ledger::Row>& rows, c
                              const BookSettings& settings) {
   const int units = minor_units(settings.currency);
   if (state.last_night && !settings.cash.yearly_rate.is_zero()) {
-    ledger::apply_interest(state.account, rows, settings.cash.yearly_rate, closes.date.days_since(*state.last_night),
-                           units);
+    ledger::apply_interest(state.account, rows, settings.cash.yearly_rate,
+                           closes.date.days_since(*state.last_night), units);
   }
   for (std::size_t line = 0; line < settings.instruments.size(); ++line) {
     const Close& close = *closes.closes[line];
@@ -57,9 +59,10 @@ void apply_corporate_actions(BookState& state, std::vector<ledger::Row>& rows, c
     for (Order& order : state.pending->orders) {
       if (order.line != line) continue;
       // Selling everything stays selling everything, odd lots included.
-      order.quantity = !order.buy && order.quantity == held_before
-                           ? state.account.quantities[line]
-                           : (order.quantity * *close.split).floor_to_multiple(lot_of(settings.instruments[line]));
+      order.quantity =
+          !order.buy && order.quantity == held_before
+              ? state.account.quantities[line]
+              : (order.quantity * *close.split).floor_to_multiple(lot_of(settings.instruments[line]));
     }
   }
 }
@@ -79,7 +82,8 @@ void fill_sheet(ledger::Account& account, std::vector<ledger::Row>& rows, const 
   }
 
   const auto outlay = [&](const Order& order) {
-    return -ledger::trade_cash(order.quantity, trade_terms(settings, order.line, closes.closes[order.line]->close))
+    return -ledger::trade_cash(order.quantity,
+                               trade_terms(settings, order.line, closes.closes[order.line]->close))
                 .total();
   };
   Decimal needed;
@@ -98,9 +102,9 @@ void fill_sheet(ledger::Account& account, std::vector<ledger::Row>& rows, const 
       const auto largest = std::max_element(
           buys.begin(), buys.end(), [&](const Order& a, const Order& b) { return outlay(a) < outlay(b); });
       const Decimal before = outlay(*largest);
-      const Decimal less = quantity_given_back(settings.instruments[largest->line],
-                                               closes.closes[largest->line]->close, needed - account.cash,
-                                               buys.size());
+      const Decimal less =
+          quantity_given_back(settings.instruments[largest->line], closes.closes[largest->line]->close,
+                              needed - account.cash, buys.size());
       largest->quantity = std::max(Decimal(), largest->quantity - less);
       needed += outlay(*largest) - before;
     }

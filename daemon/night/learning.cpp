@@ -23,13 +23,15 @@ namespace {
 // A day cut to the lines that the strategy weighs.
 strategies::Outcome<void> learn_day(strategies::Strategy& strategy, const std::vector<double>& relatives,
                                     const std::vector<std::uint8_t>& absent) {
-  return strategy.learn({std::span(relatives).first(strategy.size()), std::span(absent).first(strategy.size())});
+  return strategy.learn(
+      {std::span(relatives).first(strategy.size()), std::span(absent).first(strategy.size())});
 }
 
 }  // namespace
 
 strategies::Outcome<Learner> learned(const Learner& learner, const BookSettings& settings,
-                                     const std::vector<double>& relatives, const std::vector<std::uint8_t>& absent) {
+                                     const std::vector<double>& relatives,
+                                     const std::vector<std::uint8_t>& absent) {
   std::shared_ptr<strategies::Strategy> strategy = learner.strategy->clone();
   if (strategies::Outcome<void> fine = learn_day(*strategy, relatives, absent); !fine) {
     return tl::unexpected<strategies::Refusal>(fine.error());

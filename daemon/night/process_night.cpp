@@ -31,13 +31,15 @@ const gate::Worth* Evidence::shown_worth() const {
 }
 
 std::optional<Date> next_date(const BookState& state, const BookSettings& settings) {
-  return settings.calendar.at_or_after(state.last_night ? state.last_night->plus_days(1) : settings.start.date);
+  return settings.calendar.at_or_after(state.last_night ? state.last_night->plus_days(1)
+                                                        : settings.start.date);
 }
 
 namespace {
 
 // Step 1. What the closes lack; empty where the night can go on.
-std::vector<std::string> missing(const BookState& state, const ClosesOfTheDay& closes, const BookSettings& settings) {
+std::vector<std::string> missing(const BookState& state, const ClosesOfTheDay& closes,
+                                 const BookSettings& settings) {
   std::vector<std::string> reasons;
   const std::optional<Date> next = next_date(state, settings);
   const Date earliest = state.last_night ? state.last_night->plus_days(1) : settings.start.date;
@@ -79,8 +81,11 @@ costs::Proportional proportional_costs(const BookSettings& settings) {
 // Steps 6 and 7: the gate's question, and what becomes of its answer in whole lots. Fills the evidence.
 gate::Problem decide(Evidence& evidence, const BookState& state, const ClosesOfTheDay& closes,
                      const BookSettings& settings) {
-  gate::Problem problem{state.covariation.estimate(), to_eigen(evidence.held_after), to_eigen(evidence.wanted),
-                        proportional_costs(settings), evidence.response,
+  gate::Problem problem{state.covariation.estimate(),
+                        to_eigen(evidence.held_after),
+                        to_eigen(evidence.wanted),
+                        proportional_costs(settings),
+                        evidence.response,
                         {settings.gate.extra_gain, settings.gate.payback_days_max, settings.gate.always}};
   evidence.decision = gate::decide(problem);
   evidence.verdict = Verdict::stay;
@@ -115,9 +120,11 @@ Answer process(const BookState& before, const ClosesOfTheDay& closes, const std:
   if (!has_learner(before, settings)) {
     const bool learned_days = before.nights > 1;  // the first night learns nothing
     if (learned_days && history == nullptr) return NeedsHistory{settings.start.date, *before.last_night};
-    if (learned_days && (history->size() != before.nights - 1 || history->back().date != *before.last_night)) {
-      return waiting("the history for the rebuild has " + std::to_string(history->size()) + " days, not the " +
-                     std::to_string(before.nights - 1) + " up to " + before.last_night->to_string());
+    if (learned_days &&
+        (history->size() != before.nights - 1 || history->back().date != *before.last_night)) {
+      return waiting("the history for the rebuild has " + std::to_string(history->size()) +
+                     " days, not the " + std::to_string(before.nights - 1) + " up to " +
+                     before.last_night->to_string());
     }
     strategies::Outcome<Learner> rebuilt = rebuilt_learner(settings, learned_days ? *history : History{});
     if (!rebuilt) return waiting(rebuilt.error().problem + "; " + rebuilt.error().remedy);
@@ -140,9 +147,11 @@ Answer process(const BookState& before, const ClosesOfTheDay& closes, const std:
     }
   }
 
-  evidence.relatives = price_relatives(before, closes, settings);  // step 3, before anything acts on the account
+  evidence.relatives =
+      price_relatives(before, closes, settings);  // step 3, before anything acts on the account
   if (const double cash = evidence.relatives[settings.cash_index()]; !(cash > 0)) {
-    return waiting("the interest since the last night takes all the cash; look for a missing date or at yearly_rate");
+    return waiting(
+        "the interest since the last night takes all the cash; look for a missing date or at yearly_rate");
   }
 
   // Step 2. Opening holdings are stated as of the first night's close, after its corporate actions.
@@ -217,8 +226,9 @@ Answer process(const BookState& before, const ClosesOfTheDay& closes, const std:
 
 }  // namespace
 
-Answer process_night(const BookState& state, const ClosesOfTheDay& closes, const std::vector<DeskEvent>& events,
-                     const BookSettings& settings, const History* history) {
+Answer process_night(const BookState& state, const ClosesOfTheDay& closes,
+                     const std::vector<DeskEvent>& events, const BookSettings& settings,
+                     const History* history) {
   try {
     return process(state, closes, events, settings, history);
   } catch (const DecimalOverflow& overflow) {

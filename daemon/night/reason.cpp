@@ -11,7 +11,9 @@ namespace {
 
 constexpr double trading_days_a_year = 252.0;
 
-std::string percent(double weight) { return fmt::format("{:.1f} %", 100 * weight); }
+std::string percent(double weight) {
+  return fmt::format("{:.1f} %", 100 * weight);
+}
 // Two digits after the point; small amounts keep two digits that say something.
 std::string basis_points(double fraction) {
   const double bp = 1e4 * fraction;
@@ -26,29 +28,35 @@ std::string trading_days(double days) {
 }
 
 std::string figures_in_words(const gate::Worth& worth, const gate::Problem& problem) {
-  const std::string cost =
-      worth.cost > 0 ? fmt::format(" Cost {} once.", basis_points(worth.cost)) : std::string(" It costs nothing.");
-  // Before any line has moved the covariation is the identity: good enough for the band, which does not depend
-  // on its level, but no measure of growth or of days.
+  const std::string cost = worth.cost > 0 ? fmt::format(" Cost {} once.", basis_points(worth.cost))
+                                          : std::string(" It costs nothing.");
+  // Before any line has moved the covariation is the identity: good enough for the band, which does not
+  // depend on its level, but no measure of growth or of days.
   if (problem.covariation.isIdentity(0)) {
     return cost + " What it saves and when it pays back cannot be said before the lines have moved.";
   }
   if (!(worth.growth_saved > 0) || !worth.payback_days) return cost + " It saves no growth.";
   const bool has_horizon = worth.horizon_days && *worth.horizon_days > 0;
-  return cost + fmt::format(" Saves {} of growth a year if the wanted mix is the right one. Pays back {}; horizon {}.",
-                            basis_points(worth.growth_saved * trading_days_a_year), trading_days(*worth.payback_days),
-                            has_horizon ? fmt::format("{:.0f} days", *worth.horizon_days) : std::string("none"));
+  return cost +
+         fmt::format(
+             " Saves {} of growth a year if the wanted mix is the right one. Pays back {}; horizon {}.",
+             basis_points(worth.growth_saved * trading_days_a_year), trading_days(*worth.payback_days),
+             has_horizon ? fmt::format("{:.0f} days", *worth.horizon_days) : std::string("none"));
 }
 
-std::string verdict_word(bool pays) { return pays ? "move" : "stay"; }
+std::string verdict_word(bool pays) {
+  return pays ? "move" : "stay";
+}
 
 // "The verdict would be the same with costs halved, and `stay` with costs doubled."
 std::string with_other_costs(const gate::Problem& problem, bool pays) {
-  const bool halved = gate::pays_with_costs_times(problem, 0.5), doubled = gate::pays_with_costs_times(problem, 2.0);
+  const bool halved = gate::pays_with_costs_times(problem, 0.5),
+             doubled = gate::pays_with_costs_times(problem, 2.0);
   const auto word = [&](bool other) {
     return other == pays ? std::string("the same") : "`" + verdict_word(other) + "`";
   };
-  if (halved == pays && doubled == pays) return " The verdict would be the same with costs halved or doubled.";
+  if (halved == pays && doubled == pays)
+    return " The verdict would be the same with costs halved or doubled.";
   return fmt::format(" The verdict would be {} with costs halved, and {} with costs doubled.", word(halved),
                      word(doubled));
 }
@@ -70,7 +78,8 @@ std::optional<std::size_t> nearest_line(const std::vector<gate::Edges>& edges, s
 
 std::string between(const gate::Edges& edges) {
   if (edges.weight_below && edges.weight_above) {
-    return fmt::format("no trade between {:.1f} and {:.1f}", 100 * *edges.weight_below, 100 * *edges.weight_above);
+    return fmt::format("no trade between {:.1f} and {:.1f}", 100 * *edges.weight_below,
+                       100 * *edges.weight_above);
   }
   if (edges.weight_above) return fmt::format("no trade below {:.1f}", 100 * *edges.weight_above);
   return fmt::format("no trade above {:.1f}", 100 * *edges.weight_below);
@@ -89,7 +98,8 @@ std::string stay_inside(const Evidence& evidence, const gate::Problem& problem, 
   const gate::Triggers triggers = gate::triggers(problem, evidence.decision.penalty, *line);
   // The nearer of the two closes, in ratio.
   std::optional<double> factor = triggers.factor_above;
-  if (triggers.factor_below && (!factor || 1 / *triggers.factor_below < *factor)) factor = triggers.factor_below;
+  if (triggers.factor_below && (!factor || 1 / *triggers.factor_below < *factor))
+    factor = triggers.factor_below;
   if (factor) {
     text += fmt::format("; with the other closes unchanged, a close of {} at {} would move it",
                         settings.line_name(*line), price(closes.closes[*line]->close, *factor));
@@ -99,13 +109,14 @@ std::string stay_inside(const Evidence& evidence, const gate::Problem& problem, 
 
 }  // namespace
 
-std::string reason_in_words(const Evidence& evidence, const gate::Problem& problem, const ClosesOfTheDay& closes,
-                            const BookSettings& settings) {
+std::string reason_in_words(const Evidence& evidence, const gate::Problem& problem,
+                            const ClosesOfTheDay& closes, const BookSettings& settings) {
   std::string text = std::string(name_of(evidence.verdict)) + ".";
   if (evidence.verdict == Verdict::withheld) {
     return text + " The rule has learned tonight and the holdings are marked, but no sheet is made.";
   }
-  const std::string figures = evidence.shown_worth() ? figures_in_words(*evidence.shown_worth(), problem) : std::string();
+  const std::string figures =
+      evidence.shown_worth() ? figures_in_words(*evidence.shown_worth(), problem) : std::string();
   if (evidence.verdict == Verdict::move) {
     if (settings.gate.always) {
       return text + " This book trades to the wanted mix every night, whatever it costs." + figures;
@@ -121,14 +132,17 @@ std::string reason_in_words(const Evidence& evidence, const gate::Problem& probl
   switch (evidence.decision.worth.reason) {
     case gate::Worth::Reason::horizon_too_short:
       return text +
-             fmt::format(" A line has left its band, but the move would not earn its cost with a margin of {:.0f} %.",
-                         100 * settings.gate.extra_gain) +
+             fmt::format(
+                 " A line has left its band, but the move would not earn its cost with a margin of {:.0f} %.",
+                 100 * settings.gate.extra_gain) +
              figures + with_other_costs(problem, false);
     case gate::Worth::Reason::payback_too_long:
       return text +
-             fmt::format(" A line has left its band, but the move would take longer to pay back than the {:g} trading "
-                         "days that the settings allow.",
-                         settings.gate.payback_days_max.value_or(0)) +
+             fmt::format(
+                 " A line has left its band, but the move would take longer to pay back than the {:g} "
+                 "trading "
+                 "days that the settings allow.",
+                 settings.gate.payback_days_max.value_or(0)) +
              figures + with_other_costs(problem, false);
     case gate::Worth::Reason::no_saving:
       return text + " The best move saves no growth." + with_other_costs(problem, false);

@@ -22,11 +22,14 @@ double finite(double value) {
   return value;
 }
 
-json optional_number(const std::optional<double>& value) { return value ? json(finite(*value)) : json(); }
+json optional_number(const std::optional<double>& value) {
+  return value ? json(finite(*value)) : json();
+}
 
 json by_line(const std::vector<double>& values, const BookSettings& settings) {
   json out = json::object();
-  for (std::size_t line = 0; line < values.size(); ++line) out[settings.line_name(line)] = finite(values[line]);
+  for (std::size_t line = 0; line < values.size(); ++line)
+    out[settings.line_name(line)] = finite(values[line]);
   return out;
 }
 
@@ -131,7 +134,8 @@ std::string canonical_bytes(const Night& night, const BookSettings& settings) {
       {"verdict", name_of(evidence.verdict)},
       {"reason", evidence.reason},
       {"cost_bp", worth ? json(finite(1e4 * worth->cost)) : json()},
-      {"growth_saved_bp_year", worth ? json(finite(1e4 * trading_days_a_year * worth->growth_saved)) : json()},
+      {"growth_saved_bp_year",
+       worth ? json(finite(1e4 * trading_days_a_year * worth->growth_saved)) : json()},
       {"payback_days", worth ? optional_number(worth->payback_days) : json()},
       {"horizon_days", worth ? optional_number(worth->horizon_days) : json()},
       {"turnover", finite(evidence.turnover)},

@@ -25,8 +25,9 @@ Decimal nearest_lots(const Decimal& quantity, const Decimal& lot) {
 
 }  // namespace
 
-SizedMove size_move(const ledger::Account& account, const std::vector<double>& held, const std::vector<double>& target,
-                    double nu, const ClosesOfTheDay& closes, const BookSettings& settings) {
+SizedMove size_move(const ledger::Account& account, const std::vector<double>& held,
+                    const std::vector<double>& target, double nu, const ClosesOfTheDay& closes,
+                    const BookSettings& settings) {
   const std::size_t instruments = settings.instruments.size();
   std::vector<Decimal> prices(instruments);
   for (std::size_t line = 0; line < instruments; ++line) prices[line] = closes.closes[line]->close;
@@ -46,10 +47,10 @@ SizedMove size_move(const ledger::Account& account, const std::vector<double>& h
   const auto cash_effect = [&](const Draft& draft) {
     return ledger::trade_cash(draft.quantity, trade_terms(settings, draft.line, prices[draft.line])).total();
   };
-  const Decimal reserved =
-      settings.cash.in_mix ? Decimal()
-                           : (value * Decimal::nearest(settings.cash.reserve, fractional_quantity_scale))
-                                 .rounded_down(minor_units(settings.currency));
+  const Decimal reserved = settings.cash.in_mix
+                               ? Decimal()
+                               : (value * Decimal::nearest(settings.cash.reserve, fractional_quantity_scale))
+                                     .rounded_down(minor_units(settings.currency));
   const Decimal floor = std::min(account.cash, reserved);
   Decimal cash = account.cash;
   for (const Draft& draft : drafts) cash += cash_effect(draft);
@@ -65,8 +66,8 @@ SizedMove size_move(const ledger::Account& account, const std::vector<double>& h
       }
     }
     if (most == nullptr) break;  // only sales are left, and they bring cash
-    const Decimal less =
-        quantity_given_back(settings.instruments[most->line], prices[most->line], floor - cash, drafts.size());
+    const Decimal less = quantity_given_back(settings.instruments[most->line], prices[most->line],
+                                             floor - cash, drafts.size());
     const Decimal before = cash_effect(*most);
     most->quantity = std::max(Decimal(), most->quantity - less);
     cash += cash_effect(*most) - before;
@@ -77,7 +78,8 @@ SizedMove size_move(const ledger::Account& account, const std::vector<double>& h
   std::vector<ledger::Row> rows;
   for (const Draft& draft : drafts) {
     if (draft.quantity.is_zero()) continue;
-    Order order{draft.line, draft.quantity.is_positive(), draft.quantity.abs(), prices[draft.line], Decimal()};
+    Order order{draft.line, draft.quantity.is_positive(), draft.quantity.abs(), prices[draft.line],
+                Decimal()};
     order.estimated_cost = estimated_cost(settings, order);
     sized.traded_value += order.quantity * order.reference_close;
     ledger::apply_trade(sized.account_after, rows, draft.line, draft.quantity,

@@ -119,7 +119,8 @@ SnapshotBytes save_snapshot(const BookState& state, const BookSettings& settings
     for (const Order& order : state.pending->orders) pending["orders"].push_back(order_json(order, settings));
   }
   json emitted;
-  if (state.emitted) emitted = {{"date", state.emitted->date.to_string()}, {"weights", state.emitted->weights}};
+  if (state.emitted)
+    emitted = {{"date", state.emitted->date.to_string()}, {"weights", state.emitted->weights}};
   std::string covariation = state.covariation.save();
   const json desk = {{"format", desk_format},
                      {"book", settings.name},

@@ -5,6 +5,7 @@
 #include <optional>
 #include <variant>
 
+#include "daemon/http/entity_tag.h"
 #include "daemon/http/router.h"
 #include "daemon/runner/night_answers.h"
 #include "daemon/runner/on_pool.h"
@@ -69,7 +70,9 @@ bool Answers::is_stale(const BookView& view) const {
 
 namespace {
 
-http::Response json_response(const ordered_json& body) { return {200, "application/json", {}, body.dump()}; }
+http::Response json_response(const ordered_json& body) {
+  return {200, "application/json", {}, body.dump()};
+}
 
 http::Response no_book(const std::string& name) {
   return http::problem(404, "", "there is no book \"" + name + "\"; /v1/books lists them");
@@ -132,6 +135,14 @@ std::string next_link(const http::Request& request, const std::string& cursor) {
   return "<" + request.path + "?" + query + "cursor=" + cursor + ">; rel=\"next\"";
 }
 
+// Every answer of version 1 carries an entity tag, so that a client can ask whether it still has the latest.
+awaitable<http::Response> tagged(std::shared_ptr<const http::Handler> routes, const http::Request& request) {
+  awaitable<http::Response> answered = (*routes)(request);
+  http::Response response = co_await std::move(answered);
+  const bool version_1 = !request.segments.empty() && request.segments.front() == "v1";
+  co_return version_1 ? http::with_entity_tag(request, std::move(response)) : std::move(response);
+}
+
 }  // namespace
 
 http::Response Answers::books() const {
@@ -158,7 +169,8 @@ http::Response Answers::book(const BookView& view) const {
   body["date"] = nullptr;
   if (!view.night_bytes.empty()) {
     const ordered_json night = ordered_json::parse(view.night_bytes);
-    copy(night, body, {"date", "verdict", "reason", "account", "wealth_net", "wealth_frictionless", "strategy"});
+    copy(night, body,
+         {"date", "verdict", "reason", "account", "wealth_net", "wealth_frictionless", "strategy"});
   }
   body["next_night"] = view.next_night ? ordered_json(view.next_night->to_string()) : ordered_json();
   body["stale"] = is_stale(view);
@@ -173,8 +185,9 @@ http::Response Answers::book(const BookView& view) const {
 http::Response Answers::target(const BookView& view) const {
   if (view.night_bytes.empty()) {
     return http::problem(404, "",
-                         "book " + view.settings->name + " has had no night yet; its first is the first trading day "
-                                                         "from " +
+                         "book " + view.settings->name +
+                             " has had no night yet; its first is the first trading day "
+                             "from " +
                              view.settings->start.date.to_string() + " on, once every close of it is here");
   }
   const ordered_json night = ordered_json::parse(view.night_bytes);
@@ -201,32 +214,35 @@ http::Handler Answers::handler() {
     if (!ready_) co_return http::problem(503, "", "the service is starting or stopping");
     co_return json_response({{"status", "ready"}});
   });
-  router.get("/v1/books", [this](const Request&, const PathValues&) -> awaitable<http::Response> {
-    co_return books();
-  });
+  router.get("/v1/books",
+             [this](const Request&, const PathValues&) -> awaitable<http::Response> { co_return books(); });
   router.get("/v1/books/{book}", [this](const Request&, const PathValues& at) -> awaitable<http::Response> {
     const BookViewPointer view = find(at.at("book"));
     co_return view ? book(*view) : no_book(at.at("book"));
   });
-  router.get("/v1/books/{book}/target", [this](const Request&, const PathValues& at) -> awaitable<http::Response> {
-    const BookViewPointer view = find(at.at("book"));
-    co_return view ? target(*view) : no_book(at.at("book"));
-  });
-  router.get("/v1/books/{book}/log", [this](const Request& request, const PathValues& at) -> awaitable<http::Response> {
-    const BookViewPointer view = find(at.at("book"));
-    if (!view) co_return no_book(at.at("book"));
-    const std::variant<store::LogFilter, std::string> filter = log_filter(request);
-    if (const std::string* problem = std::get_if<std::string>(&filter)) co_return http::problem(400, "", *problem);
-    auto read = [view, request, filter = std::get<store::LogFilter>(filter)](store::Store& store) -> http::Response {
-      Result<LogPage> page = log_page(store, filter, *view);
-      if (!page) return http::problem(503, page.error());
-      http::Response response{200, "application/json", {}, std::move(page->body)};
-      if (page->next) response.headers["Link"] = next_link(request, *page->next);
-      return response;
-    };
-    awaitable<http::Response> response = reader_->run(std::move(read));
-    co_return co_await std::move(response);
-  });
+  router.get("/v1/books/{book}/target",
+             [this](const Request&, const PathValues& at) -> awaitable<http::Response> {
+               const BookViewPointer view = find(at.at("book"));
+               co_return view ? target(*view) : no_book(at.at("book"));
+             });
+  router.get("/v1/books/{book}/log",
+             [this](const Request& request, const PathValues& at) -> awaitable<http::Response> {
+               const BookViewPointer view = find(at.at("book"));
+               if (!view) co_return no_book(at.at("book"));
+               const std::variant<store::LogFilter, std::string> filter = log_filter(request);
+               if (const std::string* problem = std::get_if<std::string>(&filter))
+                 co_return http::problem(400, "", *problem);
+               auto read = [view, request, filter = std::get<store::LogFilter>(filter)](
+                               store::Store& store) -> http::Response {
+                 Result<LogPage> page = log_page(store, filter, *view);
+                 if (!page) return http::problem(503, page.error());
+                 http::Response response{200, "application/json", {}, std::move(page->body)};
+                 if (page->next) response.headers["Link"] = next_link(request, *page->next);
+                 return response;
+               };
+               awaitable<http::Response> response = reader_->run(std::move(read));
+               co_return co_await std::move(response);
+             });
   router.get("/v1/books/{book}/nights/{date}",
              [this](const Request&, const PathValues& at) -> awaitable<http::Response> {
                const BookViewPointer view = find(at.at("book"));
@@ -237,8 +253,8 @@ http::Handler Answers::handler() {
                  Result<std::optional<store::StoredNight>> night = store.night(view->settings->name, date);
                  if (!night) return http::problem(503, night.error());
                  if (!*night) {
-                   return http::problem(404, "", "book " + view->settings->name + " has no night of " +
-                                                     date.to_string());
+                   return http::problem(
+                       404, "", "book " + view->settings->name + " has no night of " + date.to_string());
                  }
                  Result<std::string> body = night_json(**night, *view);
                  if (!body) return http::problem(503, body.error());
@@ -247,7 +263,8 @@ http::Handler Answers::handler() {
                awaitable<http::Response> response = reader_->run(std::move(read));
                co_return co_await std::move(response);
              });
-  return std::move(router).handler();
+  auto routes = std::make_shared<const http::Handler>(std::move(router).handler());
+  return [routes](const Request& request) { return tagged(routes, request); };
 }
 
 }  // namespace nightweigh::runner

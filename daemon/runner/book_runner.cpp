@@ -27,7 +27,8 @@ std::string fixed_key_that_differs(const std::string& before, const std::string&
 }
 
 // The book's `settings` entry of the journal agrees with the settings from here on.
-Result<store::JournalHead> settle_settings(const BookSettings& settings, store::Store& store, bool has_nights) {
+Result<store::JournalHead> settle_settings(const BookSettings& settings, store::Store& store,
+                                           bool has_nights) {
   Result<std::optional<store::JournalEntry>> newest = store.newest(settings.name, settings_kind);
   if (!newest) return failure(newest.error());
   if (*newest && (*newest)->bytes == settings.resolved_text) return store.head(settings.name);
@@ -60,8 +61,8 @@ Result<std::unique_ptr<BookRunner>> BookRunner::open(std::shared_ptr<const BookS
   book->head_ = *head;
   if (!*snapshot) return book;
 
-  Result<night::LoadedState> loaded =
-      night::load_snapshot({(*snapshot)->desk, (*snapshot)->strategy, (*snapshot)->covariation}, *book->settings_);
+  Result<night::LoadedState> loaded = night::load_snapshot(
+      {(*snapshot)->desk, (*snapshot)->strategy, (*snapshot)->covariation}, *book->settings_);
   if (!loaded) return failure(loaded.error());
   book->state_ = std::move(loaded->state);
   book->rebuild_because_ = std::move(loaded->rebuild_because);
@@ -94,9 +95,10 @@ Result<BookRunner::Ready> BookRunner::ready_days(store::Store& store, std::size_
     }
     if (!missing.empty()) {
       if (missing.size() == instruments_.size()) {
-        ready.waiting.push_back(date.to_string() + ": no close of any instrument yet, though closes of " +
-                                (*with_closes)->to_string() +
-                                " are here; deliver them, or list the date as no trading day in the calendar file");
+        ready.waiting.push_back(
+            date.to_string() + ": no close of any instrument yet, though closes of " +
+            (*with_closes)->to_string() +
+            " are here; deliver them, or list the date as no trading day in the calendar file");
       } else {
         for (const std::string& instrument : missing) {
           ready.waiting.push_back(date.to_string() + ": no close of " + instrument + " yet");
@@ -121,7 +123,8 @@ BookRunner::Computed BookRunner::compute(const std::vector<night::ClosesOfTheDay
       computed.nights.push_back(std::move(*night));
       continue;
     }
-    if (night::Waiting* waiting = std::get_if<night::Waiting>(&answer)) computed.waiting = std::move(waiting->reasons);
+    if (night::Waiting* waiting = std::get_if<night::Waiting>(&answer))
+      computed.waiting = std::move(waiting->reasons);
     computed.needs_history = std::holds_alternative<night::NeedsHistory>(answer);
     break;
   }
@@ -141,7 +144,8 @@ Result<night::History> BookRunner::history(store::Store& store) const {
       if (entry.kind != store::night_kind) continue;
       std::optional<night::HistoryDay> day = night::history_day(entry.bytes);
       if (!day || day->relatives.size() != settings_->line_count()) {
-        return failure({ErrorKind::corrupted, "book " + settings_->name + ", journal entry " + std::to_string(sequence),
+        return failure({ErrorKind::corrupted,
+                        "book " + settings_->name + ", journal entry " + std::to_string(sequence),
                         "is no night of these instruments", "", "restore the database from a backup"});
       }
       if (!std::exchange(first, false)) history.push_back(std::move(*day));

@@ -19,7 +19,8 @@ class BookRunner {
  public:
   // Reads the book's journal and last state. Appends a `settings` entry where the resolved settings are new
   // or have changed; refuses changes that a book with nights cannot take (start, instruments, currency).
-  static Result<std::unique_ptr<BookRunner>> open(std::shared_ptr<const BookSettings> settings, store::Store& store);
+  static Result<std::unique_ptr<BookRunner>> open(std::shared_ptr<const BookSettings> settings,
+                                                  store::Store& store);
 
   const BookSettings& settings() const { return *settings_; }
   const std::vector<std::string>& instruments() const { return instruments_; }

@@ -22,7 +22,8 @@ boost::asio::awaitable<std::invoke_result_t<Work&>> on_pool(boost::asio::thread_
   using Value = std::invoke_result_t<Work&>;
   const auto shared = std::make_shared<Work>(std::move(work));
   auto task = [shared]() -> boost::asio::awaitable<Value> { co_return (*shared)(); };
-  boost::asio::awaitable<Value> result = boost::asio::co_spawn(pool, std::move(task), boost::asio::use_awaitable);
+  boost::asio::awaitable<Value> result =
+      boost::asio::co_spawn(pool, std::move(task), boost::asio::use_awaitable);
   co_return co_await std::move(result);
 }
 

@@ -50,11 +50,12 @@ Result<std::unique_ptr<Runner>> Runner::open(const std::vector<BookSettings>& bo
 std::vector<BookRunner*> Runner::holders_of(const feed::ParsedBatch& batch) const {
   std::vector<BookRunner*> out;
   for (const std::unique_ptr<BookRunner>& book : books_) {
-    const bool holds = std::any_of(batch.rows.begin(), batch.rows.end(), [&](const feed::ParsedBatch::Row& row) {
-      const auto holders = by_instrument_.find(row.close.instrument);
-      return holders != by_instrument_.end() &&
-             std::find(holders->second.begin(), holders->second.end(), book.get()) != holders->second.end();
-    });
+    const bool holds =
+        std::any_of(batch.rows.begin(), batch.rows.end(), [&](const feed::ParsedBatch::Row& row) {
+          const auto holders = by_instrument_.find(row.close.instrument);
+          return holders != by_instrument_.end() && std::find(holders->second.begin(), holders->second.end(),
+                                                              book.get()) != holders->second.end();
+        });
     if (holds) out.push_back(book.get());
   }
   return out;
@@ -64,7 +65,8 @@ feed::Acknowledgement Runner::take(const std::string& bytes, bool is_json, const
   feed::ParsedBatch batch =
       is_json ? feed::parse_json(bytes, parts_.limits) : feed::parse_csv(bytes, parts_.limits);
   const auto refused = [&](std::vector<feed::RowError> errors) {
-    parts_.log.warn("batch={} from {} refused: {}", batch.digest.substr(0, 12), source, errors.front().message());
+    parts_.log.warn("batch={} from {} refused: {}", batch.digest.substr(0, 12), source,
+                    errors.front().message());
     return feed::refusal(batch.digest, std::move(errors));
   };
   if (!batch.ok()) return refused(std::move(batch.errors));
@@ -79,7 +81,8 @@ feed::Acknowledgement Runner::take(const std::string& bytes, bool is_json, const
     for (const std::unique_ptr<BookRunner>& book : books_) {
       today[book->settings().name] = platform::date_in_zone(parts_.clock.now(), book->settings().time_zone);
     }
-    Result<Admission> admission = admit(batch, by_instrument_, today, parts_.store, parts_.limits.errors_max);
+    Result<Admission> admission =
+        admit(batch, by_instrument_, today, parts_.store, parts_.limits.errors_max, &stop_);
     if (!admission) return refused({storage_error(admission.error())});
     if (!admission->errors.empty()) return refused(std::move(admission->errors));
     if (!admission->fresh.empty()) {
@@ -117,8 +120,11 @@ std::vector<feed::BookAnswer> Runner::advance(const std::vector<BookRunner*>& bo
   for (BookRunner* book : books) {
     feed::BookAnswer& answer = answers[book->settings().name];
     answer.waiting = answer.dates.empty();
-    if (stop_ && answer.reasons.empty() && answer.dates.empty()) {
-      answer.reasons.emplace_back("the service is stopping; it goes on at its next start");
+    if (answer.waiting && answer.reasons.empty()) {
+      const std::optional<Date> next = night::next_date(book->state(), book->settings());
+      answer.reasons.push_back(stop_  ? "the service is stopping; it goes on at its next start"
+                               : next ? "nothing new: the next night is " + next->to_string()
+                                      : "nothing new: the next night is the next date with closes");
     }
     out.push_back(std::move(answer));
   }
@@ -189,7 +195,8 @@ bool Runner::advance_round(std::vector<BookRunner*>& active, Answers& answers) {
       report_trouble(*work.book, history.error().message(), answers);
       return false;
     }
-    parts_.log.info("book={} rebuilding the strategy from {} nights", work.book->settings().name, history->size());
+    parts_.log.info("book={} rebuilding the strategy from {} nights", work.book->settings().name,
+                    history->size());
     work.history = std::move(*history);
   }
   compute(works, true);
@@ -216,8 +223,8 @@ bool Runner::advance_round(std::vector<BookRunner*>& active, Answers& answers) {
       log_nights(*work.book, work.computed.nights);
     }
     if (!work.fault.empty()) {
-      report_trouble(*work.book, "the night cannot be computed, which is a fault of the program: " + work.fault,
-                     answers);
+      report_trouble(*work.book,
+                     "the night cannot be computed, which is a fault of the program: " + work.fault, answers);
       continue;
     }
     if (work.computed.waiting.empty()) active.push_back(work.book);

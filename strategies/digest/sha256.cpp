@@ -10,8 +10,8 @@ std::string sha256_bytes(std::string_view bytes) {
   std::string digest(32, '\0');
   unsigned length = 0;
   // Can only fail for want of memory or of the algorithm, which every supported OpenSSL has.
-  if (EVP_Digest(bytes.data(), bytes.size(), reinterpret_cast<unsigned char*>(digest.data()), &length, EVP_sha256(),
-                 nullptr) != 1) {
+  if (EVP_Digest(bytes.data(), bytes.size(), reinterpret_cast<unsigned char*>(digest.data()), &length,
+                 EVP_sha256(), nullptr) != 1) {
     throw std::bad_alloc();
   }
   return digest;

@@ -14,7 +14,9 @@ namespace {
 constexpr double unit_roundoff = std::numeric_limits<double>::epsilon() / 2;
 
 // Rounding errors in one dot product of m terms over 8 lanes, and the few operations around it.
-double operations(std::size_t m) { return static_cast<double>(m) / 8 + 16; }
+double operations(std::size_t m) {
+  return static_cast<double>(m) / 8 + 16;
+}
 
 }  // namespace
 
@@ -26,7 +28,8 @@ ExponentiatedGradient::ExponentiatedGradient(Choice choice)
 Outcome<std::unique_ptr<Strategy>> ExponentiatedGradient::make(const Choice& choice) {
   if (choice.m < 1) return refuse("no lines", "give at least one line");
   if (!(choice.eta > 0 && choice.eta <= 1)) {
-    return refuse("eta is " + std::to_string(choice.eta), "eta lies above 0 and at most at 1; 0.05 is common in print");
+    return refuse("eta is " + std::to_string(choice.eta),
+                  "eta lies above 0 and at most at 1; 0.05 is common in print");
   }
   return std::unique_ptr<Strategy>(new ExponentiatedGradient(choice));
 }
@@ -53,8 +56,8 @@ void ExponentiatedGradient::weigh() {
 
 Outcome<void> ExponentiatedGradient::learn(const Day& day) {
   if (Outcome<void> fine = check_day(day, choice_.m); !fine) return fine;
-  // Return of the portfolio on the present lines: sum w x / sum w. Where lines are absent, the present ones are
-  // weighed afresh: beside a heavy absent line their weights may all have left the range of doubles.
+  // Return of the portfolio on the present lines: sum w x / sum w. Where lines are absent, the present ones
+  // are weighed afresh: beside a heavy absent line their weights may all have left the range of doubles.
   double largest_present = -std::numeric_limits<double>::infinity();
   bool any_absent = false;
   for (std::size_t i = 0; i < choice_.m; ++i) {
@@ -88,7 +91,8 @@ Outcome<void> ExponentiatedGradient::learn(const Day& day) {
   }
   // A log weight is rounded twice a day at its own size: for constant relatives always to the same side.
   const double furthest = -*std::min_element(updated.begin(), updated.end());
-  log_weight_error_ += unit_roundoff * (choice_.eta * largest_gradient * operations(choice_.m) + 4 + 2 * furthest);
+  log_weight_error_ +=
+      unit_roundoff * (choice_.eta * largest_gradient * operations(choice_.m) + 4 + 2 * furthest);
   log_weight_error_ = std::min(log_weight_error_, 1.0);  // as good as nothing known; stays finite
   log_weights_ = std::move(updated);
   ++days_;

@@ -27,6 +27,8 @@ std::string Choice::canonical_text() const {
   return text;
 }
 
-std::string Choice::digest() const { return sha256_bytes(canonical_text()); }
+std::string Choice::digest() const {
+  return sha256_bytes(canonical_text());
+}
 
 }  // namespace nightweigh::strategies

@@ -4,7 +4,8 @@
 
 namespace nightweigh::strategies {
 
-std::string save_state(const Choice& choice, std::uint32_t format, std::uint64_t days, std::vector<double> values) {
+std::string save_state(const Choice& choice, std::uint32_t format, std::uint64_t days,
+                       std::vector<double> values) {
   return write_state({format, choice.rule, choice.m, choice.digest(), days, std::move(values)});
 }
 
@@ -22,7 +23,8 @@ Outcome<StateBytes> load_state(const Choice& choice, std::uint32_t format, std::
                   remedy);
   }
   if (state->m != choice.m) {
-    return refuse("the state has " + std::to_string(state->m) + " lines, the book " + std::to_string(choice.m), remedy);
+    return refuse(
+        "the state has " + std::to_string(state->m) + " lines, the book " + std::to_string(choice.m), remedy);
   }
   if (state->choice_digest != choice.digest()) {
     return refuse("the state was learned with other parameters than " + choice.canonical_text(), remedy);
@@ -33,7 +35,8 @@ Outcome<StateBytes> load_state(const Choice& choice, std::uint32_t format, std::
                   remedy);
   }
   for (std::size_t i = 0; i < value_count; ++i) {
-    if (!std::isfinite(state->values[i])) return refuse("value " + std::to_string(i) + " of the state is not finite", remedy);
+    if (!std::isfinite(state->values[i]))
+      return refuse("value " + std::to_string(i) + " of the state is not finite", remedy);
   }
   return state;
 }

@@ -12,7 +12,8 @@
 
 namespace nightweigh::strategies {
 
-std::string save_state(const Choice& choice, std::uint32_t format, std::uint64_t days, std::vector<double> values);
+std::string save_state(const Choice& choice, std::uint32_t format, std::uint64_t days,
+                       std::vector<double> values);
 
 // The state in `bytes`, if it is of this choice, of `format`, holds `value_count` finite values.
 Outcome<StateBytes> load_state(const Choice& choice, std::uint32_t format, std::size_t value_count,

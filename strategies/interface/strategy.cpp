@@ -8,7 +8,8 @@ Outcome<void> Strategy::learn_block(std::span<const Day> days) {
   for (std::size_t i = 0; i < days.size(); ++i) {
     Outcome<void> learned = learn(days[i]);
     if (!learned) {
-      return refuse("day " + std::to_string(i) + " of the block: " + learned.error().problem, learned.error().remedy);
+      return refuse("day " + std::to_string(i) + " of the block: " + learned.error().problem,
+                    learned.error().remedy);
     }
   }
   return {};

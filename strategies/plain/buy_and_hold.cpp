@@ -65,8 +65,12 @@ std::vector<double> BuyAndHold::numerical_error() const {
   return error;
 }
 
-std::string BuyAndHold::save() const { return save_state(choice_, buy_and_hold_format, days_, weights_); }
+std::string BuyAndHold::save() const {
+  return save_state(choice_, buy_and_hold_format, days_, weights_);
+}
 
-std::unique_ptr<Strategy> BuyAndHold::clone() const { return std::unique_ptr<Strategy>(new BuyAndHold(*this)); }
+std::unique_ptr<Strategy> BuyAndHold::clone() const {
+  return std::unique_ptr<Strategy>(new BuyAndHold(*this));
+}
 
 }  // namespace nightweigh::strategies

@@ -15,8 +15,9 @@ Outcome<std::unique_ptr<Strategy>> ConstantMix::make(const Choice& choice) {
   if (choice.m < 1) return refuse("no lines", "give at least one line");
   if (!choice.weights.empty()) {
     if (choice.weights.size() != choice.m) {
-      return refuse(std::to_string(choice.weights.size()) + " weights for " + std::to_string(choice.m) + " lines",
-                    "give one weight for each line");
+      return refuse(
+          std::to_string(choice.weights.size()) + " weights for " + std::to_string(choice.m) + " lines",
+          "give one weight for each line");
     }
     for (std::size_t i = 0; i < choice.m; ++i) {
       if (!(choice.weights[i] >= 0) || !std::isfinite(choice.weights[i])) {
@@ -47,8 +48,12 @@ Outcome<void> ConstantMix::learn(const Day& day) {
   return {};
 }
 
-std::string ConstantMix::save() const { return save_state(choice_, constant_mix_format, days_, {}); }
+std::string ConstantMix::save() const {
+  return save_state(choice_, constant_mix_format, days_, {});
+}
 
-std::unique_ptr<Strategy> ConstantMix::clone() const { return std::unique_ptr<Strategy>(new ConstantMix(*this)); }
+std::unique_ptr<Strategy> ConstantMix::clone() const {
+  return std::unique_ptr<Strategy>(new ConstantMix(*this));
+}
 
 }  // namespace nightweigh::strategies

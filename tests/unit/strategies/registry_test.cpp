@@ -48,8 +48,10 @@ std::vector<Choice> one_of_each(std::size_t m) {
   double total = 0;
   for (const double weight : weights) total += weight;
   for (double& weight : weights) weight /= total;
-  return {{"exponentiated_gradient", m, 0.05, {}}, {"exponentiated_gradient", m, 1.0, {}},
-          {"constant_mix", m, 0.05, {}},           {"constant_mix", m, 0.05, weights},
+  return {{"exponentiated_gradient", m, 0.05, {}},
+          {"exponentiated_gradient", m, 1.0, {}},
+          {"constant_mix", m, 0.05, {}},
+          {"constant_mix", m, 0.05, weights},
           {"buy_and_hold", m, 0.05, {}}};
 }
 
@@ -116,7 +118,8 @@ TEST_CASE("response: the share of a small drift that the wanted weights follow, 
   }
 }
 
-TEST_CASE("every rule: saved at any night, loaded and continued, it equals the uninterrupted run bit for bit") {
+TEST_CASE(
+    "every rule: saved at any night, loaded and continued, it equals the uninterrupted run bit for bit") {
   std::mt19937_64 random(20);
   for (const std::size_t m : {1U, 2U, 3U, 9U, 40U}) {
     for (const Choice& choice : one_of_each(m)) {
@@ -147,7 +150,8 @@ TEST_CASE("every rule: a block of days equals the days one by one, bit for bit, 
     for (std::size_t n = 0; n < 50; ++n) REQUIRE(single->learn(days.day(n)));
     for (const std::size_t cut : {1U, 3U, 16U, 49U, 50U}) {
       auto blocks = std::move(*make_strategy(choice));
-      for (std::size_t n = 0; n < 50; n += cut) REQUIRE(blocks->learn_block(days.block(n, std::min<std::size_t>(n + cut, 50))));
+      for (std::size_t n = 0; n < 50; n += cut)
+        REQUIRE(blocks->learn_block(days.block(n, std::min<std::size_t>(n + cut, 50))));
       CHECK(blocks->save() == single->save());
     }
   }
@@ -170,9 +174,10 @@ TEST_CASE("every rule: a refused day in a block is named, and the days before it
 
 TEST_CASE("every rule: refused days leave the state's bytes and the weights unchanged") {
   std::mt19937_64 random(23);
-  const double nan = std::numeric_limits<double>::quiet_NaN(), infinity = std::numeric_limits<double>::infinity();
-  const std::vector<std::vector<double>> bad = {{nan, 1, 1},      {1, infinity, 1}, {1, 1, -0.5}, {0, 0, 0},
-                                                {1, 1},           {1, 1, 1, 1},     {},           {-infinity, 1, 1}};
+  const double nan = std::numeric_limits<double>::quiet_NaN(),
+               infinity = std::numeric_limits<double>::infinity();
+  const std::vector<std::vector<double>> bad = {
+      {nan, 1, 1}, {1, infinity, 1}, {1, 1, -0.5}, {0, 0, 0}, {1, 1}, {1, 1, 1, 1}, {}, {-infinity, 1, 1}};
   for (const Choice& choice : one_of_each(3)) {
     const Market days = market(random, 3, 5);
     auto strategy = std::move(*make_strategy(choice));
@@ -216,7 +221,8 @@ TEST_CASE("every rule: altered, truncated and foreign bytes are refused") {
   }
 }
 
-TEST_CASE("every rule: weights stand on the simplex with the stated error beside them, clones go their own way") {
+TEST_CASE(
+    "every rule: weights stand on the simplex with the stated error beside them, clones go their own way") {
   std::mt19937_64 random(25);
   for (const Choice& choice : one_of_each(6)) {
     const Market days = market(random, 6, 300);

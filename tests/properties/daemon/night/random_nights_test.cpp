@@ -33,7 +33,9 @@ Rational exact(const Decimal& value) {
   return Rational(negative ? Integer(-Integer(text)) : Integer(text), unit);
 }
 
-Rational whole_part(const Rational& value) { return Rational(Integer(numerator(value) / denominator(value))); }
+Rational whole_part(const Rational& value) {
+  return Rational(Integer(numerator(value) / denominator(value)));
+}
 
 Rational to_cents(const Rational& value) {  // half to even
   const Rational scaled = value * 100;
@@ -44,7 +46,9 @@ Rational to_cents(const Rational& value) {  // half to even
   return below / 100;
 }
 
-double number(const Rational& value) { return value.convert_to<double>(); }
+double number(const Rational& value) {
+  return value.convert_to<double>();
+}
 
 struct Orders {
   std::vector<Rational> signed_quantities;  // one a line, 0 = none
@@ -106,7 +110,8 @@ BookSettings random_book(Random& random) {
   }
   book.start.cash = dec(pick({"1000000", "20000.01", "0.5", "250000000"}));
   if (random() % 2 == 0 || book.start.cash < dec("1")) {
-    for (const Instrument& held : book.instruments) book.start.holdings[held.id] = dec(pick({"1000", "7", "333"}));
+    for (const Instrument& held : book.instruments)
+      book.start.holdings[held.id] = dec(pick({"1000", "7", "333"}));
   }
   book.cash.in_mix = random() % 3 == 0;
   if (!book.cash.in_mix) book.cash.reserve = random() % 2 == 0 ? 0.0 : 0.07;
@@ -122,7 +127,8 @@ BookSettings random_book(Random& random) {
 class Market {
  public:
   Market(Random& random, std::size_t lines) : random_(random) {
-    for (std::size_t line = 0; line < lines; ++line) prices_.push_back(std::exp(1.0 + static_cast<double>(random() % 50) / 10));
+    for (std::size_t line = 0; line < lines; ++line)
+      prices_.push_back(std::exp(1.0 + static_cast<double>(random() % 50) / 10));
   }
   std::vector<Quote> next() {
     std::student_t_distribution<double> shock(4);
@@ -161,7 +167,8 @@ void close_to(const std::vector<double>& a, const std::vector<double>& b, double
 }
 
 struct Tally {
-  int nights = 0, moves = 0, stays = 0, shrunk = 0, splits = 0, dividends = 0, odd_exits = 0, given_back = 0;
+  int nights = 0, moves = 0, stays = 0, shrunk = 0, splits = 0, dividends = 0, odd_exits = 0, given_back = 0,
+      gained_by_rounding = 0;
 };
 
 class Auditor {
@@ -169,7 +176,8 @@ class Auditor {
   Auditor(BookSettings book, Tally& tally) : book_(std::move(book)), tally_(tally) {
     model_.quantities.assign(book_.instruments.size(), Rational());
     const std::size_t m = book_.instruments.size() + (book_.cash.in_mix ? 1 : 0);
-    rule_ = {book_.strategy.rule, book_.strategy.eta, std::vector<long double>(m, 1.0L / static_cast<long double>(m))};
+    rule_ = {book_.strategy.rule, book_.strategy.eta,
+             std::vector<long double>(m, 1.0L / static_cast<long double>(m))};
   }
 
   void check(const Night& night, const ClosesOfTheDay& today) {
@@ -265,11 +273,17 @@ class Auditor {
     }
 
     REQUIRE(exact(night.after.account.cash) == model_.cash);
-    for (std::size_t i = 0; i < instruments; ++i) REQUIRE(exact(night.after.account.quantities[i]) == model_.quantities[i]);
+    for (std::size_t i = 0; i < instruments; ++i)
+      REQUIRE(exact(night.after.account.quantities[i]) == model_.quantities[i]);
     REQUIRE(exact(evidence.value_after) == model_.value(prices));
     REQUIRE(model_.cash >= 0);
     const double paid = -std::log(number(model_.value(prices)) / number(exact(evidence.value_before_fills)));
     REQUIRE(std::abs(evidence.cost_paid - paid) <= 1e-15);
+    // Costs are never negative; only the rounding of proceeds to cents can favour the book.
+    double fills_tonight = 0;
+    for (const ledger::Row& row : evidence.rows) fills_tonight += row.cause == ledger::Cause::fill ? 1 : 0;
+    REQUIRE(evidence.cost_paid >= -(fills_tonight * 0.01 / number(model_.value(prices))) - 1e-16);
+    tally_.gained_by_rounding += evidence.cost_paid < 0 ? 1 : 0;
     check_record(night, prices);
     // net = what was held earned, less what was paid: exact but for cents of interest, dividends, splits.
     if (!first) {
@@ -305,7 +319,8 @@ class Auditor {
     for (const ledger::Row& row : evidence.rows) {
       if (row.cause != ledger::Cause::fill) continue;
       const Rational quantity = exact(row.quantity), side = quantity < 0 ? -1 : 1;
-      const Rational price = prices[*row.line] * (1 + side * exact(book_.costs[*row.line].half_spread_bp) / 10000);
+      const Rational price =
+          prices[*row.line] * (1 + side * exact(book_.costs[*row.line].half_spread_bp) / 10000);
       REQUIRE(out[*row.line] == 0);
       REQUIRE(exact(*row.price) == price);
       REQUIRE(exact(row.cash) == to_cents(-quantity * price));
@@ -314,7 +329,8 @@ class Auditor {
     return out;
   }
 
-  void settle(const std::vector<Rational>& orders, const std::vector<Rational>& fills, const std::vector<Rational>& prices) {
+  void settle(const std::vector<Rational>& orders, const std::vector<Rational>& fills,
+              const std::vector<Rational>& prices) {
     if (orders.empty()) {
       for (const Rational& fill : fills) REQUIRE(fill == 0);
       return;
@@ -375,8 +391,9 @@ class Auditor {
       REQUIRE((order.buy || amount <= model_.quantities[i]));
       tally_.odd_exits += whole_lots ? 0 : 1;
       // Within half a lot of the wish, unless a buy gave lots back or a sale took the rest with it.
-      const double wish = nu * evidence.decision.move.weights[static_cast<Eigen::Index>(i)] * number(value / prices[i]) -
-                          number(model_.quantities[i]);
+      const double wish =
+          nu * evidence.decision.move.weights[static_cast<Eigen::Index>(i)] * number(value / prices[i]) -
+          number(model_.quantities[i]);
       const double off = number(ordered[i]) - wish, half = number(lot(i)) / 2 + 1e-8 + 1e-9 * std::abs(wish);
       if (order.buy) {
         REQUIRE(off <= half);
@@ -394,7 +411,8 @@ class Auditor {
     }
     tally_.given_back += given_back ? 1 : 0;
     REQUIRE(after.cash >= 0);
-    const Rational reserve = book_.cash.in_mix ? Rational(0) : Rational(value * exact(Decimal::nearest(book_.cash.reserve, 8)));
+    const Rational reserve =
+        book_.cash.in_mix ? Rational(0) : Rational(value * exact(Decimal::nearest(book_.cash.reserve, 8)));
     REQUIRE(after.cash >= std::min(model_.cash, reserve) - Rational(1, 100));
     close_to(*evidence.moves_to, after.weights(prices), 1e-15);
     REQUIRE(std::abs(evidence.turnover - number(traded / (2 * value))) <= 1e-14);
@@ -403,11 +421,15 @@ class Auditor {
   void check_record(const Night& night, const std::vector<Rational>& prices) {
     const nlohmann::json parsed = record(night);
     REQUIRE(parsed.dump() == night.bytes);
+    for (const char* minus_zero : {":-0.0,", ":-0.0}"})
+      REQUIRE(night.bytes.find(minus_zero) == std::string::npos);
     const Rational opening = prices_.empty() ? exact(night.evidence.value_before_fills) : opening_;
     REQUIRE(std::abs(parsed["wealth_net"].get<double>() - number(model_.value(prices) / opening)) <=
             1e-15 * number(model_.value(prices) / opening) * 4);
-    REQUIRE(parsed["wealth_frictionless"].get<double>() == doctest::Approx(std::exp(log_frictionless_)).epsilon(1e-12));
-    for (const char* key : {"relatives", "wanted", "held_before", "held_after"}) REQUIRE(parsed[key].contains("CASH"));
+    REQUIRE(parsed["wealth_frictionless"].get<double>() ==
+            doctest::Approx(std::exp(log_frictionless_)).epsilon(1e-12));
+    for (const char* key : {"relatives", "wanted", "held_before", "held_after"})
+      REQUIRE(parsed[key].contains("CASH"));
     REQUIRE(exact(dec(parsed["account"]["net_asset_value"].get<std::string>())) == model_.value(prices));
     Rational rows = 0;
     for (const auto& row : parsed["ledger"]) rows += exact(dec(row["cash"].get<std::string>()));
@@ -447,9 +469,11 @@ TEST_CASE("random nights: every figure is what an independent account says") {
       state = night.after;
     }
   }
-  MESSAGE("nights " << tally.nights << ", moves " << tally.moves << ", stays " << tally.stays << ", shrunk fills "
-                    << tally.shrunk << ", splits " << tally.splits << ", dividends " << tally.dividends
-                    << ", odd-lot exits " << tally.odd_exits << ", sheets with lots given back " << tally.given_back);
+  MESSAGE("nights " << tally.nights << ", moves " << tally.moves << ", stays " << tally.stays
+                    << ", shrunk fills " << tally.shrunk << ", splits " << tally.splits << ", dividends "
+                    << tally.dividends << ", odd-lot exits " << tally.odd_exits
+                    << ", sheets with lots given back " << tally.given_back
+                    << ", nights that rounding left richer " << tally.gained_by_rounding);
   // The run is only worth something where all of it happened.
   CHECK(tally.nights == 1500);
   CHECK(tally.moves > 100);

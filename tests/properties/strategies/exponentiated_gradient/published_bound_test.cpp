@@ -102,7 +102,8 @@ TEST_CASE("published bound: random markets") {
         CAPTURE(sigma);
         const Run result = run(m, eta, 400, [&](const std::vector<double>&) {
           std::vector<double> x(m);
-          for (std::size_t i = 0; i < m; ++i) x[i] = std::exp(move(random) + 0.01 * static_cast<double>(i) * sigma);
+          for (std::size_t i = 0; i < m; ++i)
+            x[i] = std::exp(move(random) + 0.01 * static_cast<double>(i) * sigma);
           return x;
         });
         check(result);
@@ -167,7 +168,9 @@ TEST_CASE("published bound: the doubling and halving stock") {
 
 // The first term is real: against one line that always wins by little, the regret comes near to it.
 TEST_CASE("published bound: the bound is not empty") {
-  const Run result = run(2, 0.02, 3000, [](const std::vector<double>&) { return std::vector<double>{0.5, 1.0}; });
+  const Run result = run(2, 0.02, 3000, [](const std::vector<double>&) {
+    return std::vector<double>{0.5, 1.0};
+  });
   CHECK(result.regret > 0.25 * std::log(2.0) / 0.02);
   check(result);
 }

@@ -147,6 +147,7 @@ TEST_CASE("repeated names get numbers; nothing is overwritten") {
     CHECK(eventually([&] { return running.refused(name); }));
     CHECK(contains(running.reason(name), "row 1, column close: is empty"));
   }
+  CHECK(contains(running.reason("closes.csv"), "row 1"));  // the first one is still there
 }
 
 TEST_CASE("other kinds, too large ones, and names at the limit") {

@@ -22,7 +22,8 @@ TradeTerms terms(const char* close, const char* half_spread, const char* commiss
 
 TEST_CASE("a trade's cash: worked by hand") {
   SUBCASE("buy 100 at 61.20, 3 bp half spread, 2 bp commission") {
-    // price 61.20 * 1.0003 = 61.21836; proceeds -6121.836 -> -6121.84; commission 6120 * 0.0002 = 1.224 -> 1.22
+    // price 61.20 * 1.0003 = 61.21836; proceeds -6121.836 -> -6121.84; commission 6120 * 0.0002 = 1.224
+    // -> 1.22
     const TradeCash cash = trade_cash(dec("100"), terms("61.20", "0.0003", "0.0002"));
     CHECK(cash.price == dec("61.21836"));
     CHECK(cash.proceeds == dec("-6121.84"));
@@ -136,7 +137,8 @@ TEST_CASE("dividends and interest") {
   apply_dividend(book.account, book.rows, 1, dec("0.08"), 2);
   CHECK(book.rows.size() == 1);
 
-  // Simple interest: cash * rate * calendar days / 365, the convention that the settings state ("actual/365").
+  // Simple interest: cash * rate * calendar days / 365, the convention that the settings state
+  // ("actual/365").
   Book cash("1000000", "0");
   apply_interest(cash.account, cash.rows, dec("0.0365"), 3, 2);
   CHECK(cash.account.cash == dec("1000300"));
@@ -201,9 +203,11 @@ TEST_CASE("numbers beyond 38 digits throw DecimalOverflow instead of wrapping ar
   Book book("999999999999999999", "999999999999999999");
   const TradeTerms huge = terms("999999999999999999", "0.0003", "0.0002");
   CHECK_THROWS_AS(trade_cash(dec("999999999999999999"), huge), DecimalOverflow);
-  CHECK_THROWS_AS(apply_split(book.account, book.rows, 0, dec("999999999999999999.999"), dec("1"), Decimal(1), 2),
+  CHECK_THROWS_AS(
+      apply_split(book.account, book.rows, 0, dec("999999999999999999.999"), dec("1"), Decimal(1), 2),
+      DecimalOverflow);
+  CHECK_THROWS_AS(apply_dividend(book.account, book.rows, 0, dec("999999999999999999.9999999999"), 2),
                   DecimalOverflow);
-  CHECK_THROWS_AS(apply_dividend(book.account, book.rows, 0, dec("999999999999999999.9999999999"), 2), DecimalOverflow);
   CHECK_THROWS_AS(net_asset_value({Decimal(), {dec("9999999999999999999"), dec("9999999999999999999")}},
                                   {dec("9999999999999999999"), dec("9999999999999999999")}),
                   DecimalOverflow);

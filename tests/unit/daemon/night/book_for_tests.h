@@ -71,7 +71,8 @@ inline ClosesOfTheDay closes(const BookSettings& book, Date date, const std::vec
   return out;
 }
 
-inline ClosesOfTheDay closes(const BookSettings& book, const std::string& date, const std::vector<Quote>& quotes) {
+inline ClosesOfTheDay closes(const BookSettings& book, const std::string& date,
+                             const std::vector<Quote>& quotes) {
   return closes(book, day(date), quotes);
 }
 
@@ -94,7 +95,8 @@ class Desk {
  public:
   explicit Desk(BookSettings settings) : settings_(std::move(settings)), state_(initial_state(settings_)) {}
 
-  Night night(const std::string& date, const std::vector<Quote>& quotes, const std::vector<DeskEvent>& events = {}) {
+  Night night(const std::string& date, const std::vector<Quote>& quotes,
+              const std::vector<DeskEvent>& events = {}) {
     Night out = must_be_night(process_night(state_, closes(settings_, date, quotes), events, settings_));
     state_ = out.after;
     return out;
@@ -108,7 +110,9 @@ class Desk {
   BookState state_;
 };
 
-inline nlohmann::json record(const Night& night) { return nlohmann::json::parse(night.bytes); }
+inline nlohmann::json record(const Night& night) {
+  return nlohmann::json::parse(night.bytes);
+}
 
 inline double sum(const std::vector<double>& values) {
   double total = 0;

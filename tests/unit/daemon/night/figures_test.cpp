@@ -24,7 +24,8 @@ BookSettings half_and_half(int lag) {
 TEST_CASE("first night: relatives 1, nothing learned, wanted is the start mix, and the gate runs") {
   for (const char* rule : {"constant_mix", "exponentiated_gradient", "buy_and_hold"}) {
     Desk desk(harbour(rule));
-    const Night night = desk.night("2025-01-02", {{"61.20", "", ""}, {"10.05", "0.5", ""}, {"250.00", "", "2"}});
+    const Night night =
+        desk.night("2025-01-02", {{"61.20", "", ""}, {"10.05", "0.5", ""}, {"250.00", "", "2"}});
     CHECK(night.evidence.relatives == std::vector<double>(4, 1.0));
     for (std::size_t line = 0; line < 3; ++line) {
       CHECK(night.evidence.wanted[line] == doctest::Approx(1.0 / 3.0).epsilon(1e-15));
@@ -239,7 +240,8 @@ TEST_CASE("buys shrink in whole lots where cash would go negative; the book stay
   CHECK(bought.floor_to_multiple(dec("10")) == bought);
   // In proportion: both by cash / needed.
   const double share = bought.to_double() / ordered.to_double();
-  const double other = second.after.account.quantities[1].to_double() / first.evidence.sheet->orders[1].quantity.to_double();
+  const double other =
+      second.after.account.quantities[1].to_double() / first.evidence.sheet->orders[1].quantity.to_double();
   CHECK(share == doctest::Approx(other).epsilon(0.003));
 }
 
@@ -317,9 +319,11 @@ TEST_CASE("halted: learned and marked, but no sheet; resumed: as if nothing had 
 
   // Both in one day, in their order.
   Desk twice(harbour());
-  CHECK(twice.night("2025-01-02", quotes, {Halt{"a", "b"}, Resume{"a", "c"}}).evidence.verdict == Verdict::move);
+  CHECK(twice.night("2025-01-02", quotes, {Halt{"a", "b"}, Resume{"a", "c"}}).evidence.verdict ==
+        Verdict::move);
   Desk other(harbour());
-  CHECK(other.night("2025-01-02", quotes, {Resume{"a", "c"}, Halt{"a", "b"}}).evidence.verdict == Verdict::withheld);
+  CHECK(other.night("2025-01-02", quotes, {Resume{"a", "c"}, Halt{"a", "b"}}).evidence.verdict ==
+        Verdict::withheld);
   // A sheet that was out before the halt is still filled.
   Desk pending(harbour());
   pending.night("2025-01-02", quotes);

@@ -3,8 +3,7 @@
 #include <doctest/doctest.h>
 
 #include <cmath>
-#include <random>
-#include <regex>
+#include <optional>
 #include <string>
 #include <vector>
 
@@ -13,7 +12,31 @@
 namespace nightweigh::night::testing {
 namespace {
 
-bool has(const std::string& text, const std::string& part) { return text.find(part) != std::string::npos; }
+bool has(const std::string& text, const std::string& part) {
+  return text.find(part) != std::string::npos;
+}
+
+// The text with every number replaced by '#': what is left is the form of the sentences.
+std::string form_of(const std::string& text) {
+  std::string out;
+  for (std::size_t at = 0; at < text.size(); ++at) {
+    const auto digit = [&](std::size_t i) { return i < text.size() && text[i] >= '0' && text[i] <= '9'; };
+    if (!digit(at)) {
+      out += text[at];
+      continue;
+    }
+    while (digit(at + 1) || (at + 1 < text.size() && text[at + 1] == '.' && digit(at + 2))) ++at;
+    out += '#';
+  }
+  return out;
+}
+
+// The number after `words` in the text; nullopt where they do not stand there.
+std::optional<double> number_after(const std::string& text, const std::string& words) {
+  const std::size_t at = text.find(words);
+  if (at == std::string::npos) return std::nullopt;
+  return std::stod(text.substr(at + words.size()));
+}
 
 // A book of two lines after enough quiet nights to know its covariation, held off its wanted mix by `move` on
 // the last night.
@@ -27,11 +50,11 @@ struct Bench {
     const Decimal half = Decimal::nearest(cost_bp / 2, 2);
     book.costs.assign(2, {half, half});
     state = initial_state(book);
-    std::mt19937_64 random(70);
     for (int n = 0; n < 40; ++n) {
       const double a = 61.2 * (1 + 0.01 * (n % 2)), b = 10.0 * (1 + 0.02 * ((n / 2) % 2));
       last = {{Decimal::nearest(a, 2).to_string(), "", ""}, {Decimal::nearest(b, 2).to_string(), "", ""}};
-      state = must_be_night(process_night(state, closes(book, *next_date(state, book), last), {}, book)).after;
+      state =
+          must_be_night(process_night(state, closes(book, *next_date(state, book), last), {}, book)).after;
     }
     state.pending.reset();
   }
@@ -46,38 +69,46 @@ TEST_CASE("reason: a night that stays names the nearest line, its band, and the 
   const Bench bench;
   const Night night = bench.with("61.20");
   REQUIRE(night.evidence.verdict == Verdict::stay);
-  const std::regex form(
-      R"(stay\. Held (ALDER|BRINE) \d+\.\d %, wanted \d+\.\d %, no trade between \d+\.\d and \d+\.\d\. It is the nearest line, (0\.\d of the way to|just inside) its edge; with the other closes unchanged, a close of (ALDER|BRINE) at (\d+\.\d\d) would move it\. The verdict would be .* costs (halved or )?doubled\.)");
-  std::smatch parts;
   const std::string& reason = night.evidence.reason;
   INFO(reason);
-  REQUIRE(std::regex_match(reason, parts, form));
+  const std::string form = form_of(reason);
+  CHECK(form.rfind("stay. Held ", 0) == 0);
+  CHECK(has(form, " # %, wanted # %, no trade between # and #. It is the nearest line, "));
+  CHECK((has(form, "# of the way to its edge; ") || has(form, "just inside its edge; ")));
+  CHECK(has(form, "with the other closes unchanged, a close of "));
+  CHECK(has(form, " at # would move it. The verdict would be "));
+  CHECK(form.substr(form.size() - 8) == "doubled.");
 }
 
-TEST_CASE("reason: the close that it names does move the line, and a cent less does not") {
+TEST_CASE("reason: the close that it names moves the line, and a little less does not") {
   const Bench bench;
   // Where ALDER is the nearest line, ask for its close and put it in.
   int asked = 0;
   for (const char* start : {"61.90", "62.40", "63.00", "60.30", "59.90", "59.00"}) {
     const Night night = bench.with(start);
-    const std::regex close(R"(a close of ALDER at (\d+\.\d\d) would move it)");
-    std::smatch parts;
-    if (night.evidence.verdict != Verdict::stay || !std::regex_search(night.evidence.reason, parts, close)) continue;
+    const std::optional<double> close = number_after(night.evidence.reason, "a close of ALDER at ");
+    if (night.evidence.verdict != Verdict::stay || !close) continue;
     ++asked;
-    const double named = std::stod(parts[1].str()), from = std::stod(start);
-    const double beyond = named > from ? 0.02 : -0.02;
-    // The covariation and the mix are tonight's in the statement, so the question is asked of the gate itself.
-    const gate::Triggers triggers = gate::triggers(
-        {night.after.covariation.estimate(), Eigen::Map<const Eigen::VectorXd>(night.evidence.held_after.data(), 3),
-         Eigen::Map<const Eigen::VectorXd>(night.evidence.wanted.data(), 3),
-         {{0.0005, 0.0005, 0}, {0.0005, 0.0005, 0}}, night.evidence.response,
-         {bench.book.gate.extra_gain, bench.book.gate.payback_days_max, false}},
-        night.evidence.decision.penalty, 0);
-    const std::optional<double> factor = beyond > 0 ? triggers.factor_above : triggers.factor_below;
-    REQUIRE(factor);
-    CHECK(std::abs(named - from * *factor) <= 0.0051);
-    // And roughly of the next night itself, where the day's own move enters the covariation too.
-    CHECK(bench.with(Decimal::nearest(named + 40 * beyond, 2).to_string()).evidence.verdict == Verdict::move);
+    const double named = *close, from = std::stod(start);
+    // Under tonight's covariation and mix, which is what the sentence is about: a cent beyond the named close
+    // the gate moves, two cents short of it it does not.
+    const auto verdict_at = [&](double price) {
+      const double factor = price / from;
+      std::vector<double> held = night.evidence.held_after;
+      const double before = held[0];
+      for (double& weight : held) weight /= 1 + before * (factor - 1);
+      held[0] *= factor;
+      return gate::decide({night.after.covariation.estimate(),
+                           Eigen::Map<const Eigen::VectorXd>(held.data(), 3),
+                           Eigen::Map<const Eigen::VectorXd>(night.evidence.wanted.data(), 3),
+                           {{0.0005, 0.0005, 0}, {0.0005, 0.0005, 0}},
+                           night.evidence.response,
+                           {bench.book.gate.extra_gain, bench.book.gate.payback_days_max, false}})
+          .worth.pays;
+    };
+    const double cent = named > from ? 0.01 : -0.01;
+    CHECK(verdict_at(named + cent));
+    CHECK_FALSE(verdict_at(named - 2 * cent));
   }
   CHECK(asked >= 1);
 }
@@ -87,17 +118,20 @@ TEST_CASE("reason: a night that moves says cost, saving, payback and horizon") {
   const Night night = bench.with("75.00");
   REQUIRE(night.evidence.verdict == Verdict::move);
   INFO(night.evidence.reason);
-  const std::regex form(
-      R"(move\. Cost [\d.]+ bp once\. Saves [\d.]+ bp of growth a year if the wanted mix is the right one\. Pays back in \d+ trading days?; horizon \d+ days\. The verdict would be .*doubled\.)");
-  CHECK(std::regex_match(night.evidence.reason, form));
+  const std::string form = form_of(night.evidence.reason);
+  CHECK(form.rfind("move. Cost # bp once. Saves # bp of growth a year if the wanted mix is the right one. "
+                   "Pays back in # trading days; horizon # days. The verdict would be ",
+                   0) == 0);
   // The figures are those of the record.
   const nlohmann::json figures = record(night);
-  const std::string cost = night.evidence.reason.substr(std::string("move. Cost ").size());
-  CHECK(std::stod(cost) == doctest::Approx(figures["cost_bp"].get<double>()).epsilon(0.06));
+  const std::optional<double> cost = number_after(night.evidence.reason, "Cost ");
+  REQUIRE(cost);
+  CHECK(*cost == doctest::Approx(figures["cost_bp"].get<double>()).epsilon(0.06));
 }
 
 TEST_CASE("reason: the first night does not pretend to know what a move saves") {
-  const Night night = Desk(harbour()).night("2025-01-02", {{"61.20", "", ""}, {"10.05", "", ""}, {"250", "", ""}});
+  const Night night =
+      Desk(harbour()).night("2025-01-02", {{"61.20", "", ""}, {"10.05", "", ""}, {"250", "", ""}});
   CHECK(has(night.evidence.reason, "move. Cost "));
   CHECK(has(night.evidence.reason, "cannot be said before the lines have moved."));
   CHECK_FALSE(has(night.evidence.reason, "Saves"));
@@ -136,7 +170,8 @@ TEST_CASE("reason: a limit on the payback is named with its days") {
   const Night night = bench.with("75.00");
   REQUIRE(night.evidence.verdict == Verdict::stay);
   INFO(night.evidence.reason);
-  CHECK(has(night.evidence.reason, "longer to pay back than the 0.5 trading days that the settings allow. Cost "));
+  CHECK(has(night.evidence.reason,
+            "longer to pay back than the 0.5 trading days that the settings allow. Cost "));
 }
 
 TEST_CASE("reason: a margin that is not earned is named") {
@@ -145,21 +180,24 @@ TEST_CASE("reason: a margin that is not earned is named") {
   const Night night = bench.with("75.00");
   REQUIRE(night.evidence.verdict == Verdict::stay);
   INFO(night.evidence.reason);
-  CHECK(has(night.evidence.reason, "A line has left its band, but the move would not earn its cost with a margin of 50000 %."));
+  CHECK(has(night.evidence.reason,
+            "A line has left its band, but the move would not earn its cost with a margin of 50000 %."));
 }
 
 TEST_CASE("reason: halted") {
   const Bench bench;
   const Night night = bench.with("75.00", {Halt{"Mara at the desk", "two closes look wrong"}});
-  CHECK(night.evidence.reason ==
-        "withheld. The rule has learned tonight and the holdings are marked, but no sheet is made. The book is "
-        "halted by Mara at the desk: two closes look wrong.");
+  CHECK(
+      night.evidence.reason ==
+      "withheld. The rule has learned tonight and the holdings are marked, but no sheet is made. The book is "
+      "halted by Mara at the desk: two closes look wrong.");
 }
 
 TEST_CASE("reason: always, and buy and hold") {
   Bench bench;
   bench.book.gate.always = true;
-  CHECK(has(bench.with("75.00").evidence.reason, "move. This book trades to the wanted mix every night, whatever it costs. Cost "));
+  CHECK(has(bench.with("75.00").evidence.reason,
+            "move. This book trades to the wanted mix every night, whatever it costs. Cost "));
 
   Desk desk(harbour("buy_and_hold"));
   desk.night("2025-01-02", {{"61.20", "", ""}, {"10.05", "", ""}, {"250", "", ""}});

@@ -50,7 +50,8 @@ TEST_CASE("sizing: nearest lots, a half toward what is held") {
   CHECK(sized.orders[0].quantity == dec("30"));
   CHECK(sized.orders[1].quantity == dec("26"));
   CHECK(sized.orders[2].quantity == dec("26.4999999"));
-  CHECK(sized.account_after.cash == dec("100000") - dec("3000") - dec("2600") - dec("2649.99999").rounded_half_even(2));
+  CHECK(sized.account_after.cash ==
+        dec("100000") - dec("3000") - dec("2600") - dec("2649.99999").rounded_half_even(2));
   CHECK(sized.traded_value == dec("3000") + dec("2600") + dec("2649.99999"));
 }
 
@@ -101,7 +102,8 @@ TEST_CASE("sizing: less than half a lot is no order") {
 
 TEST_CASE("sizing: sales pay for buys in the same sheet, costs included") {
   const Bench bench({"1", "1"}, {"100", "50"}, {"100", "0"}, "0", "50");
-  // 0.995 = what is left a side; self-financing nu = (1 - 0.005) / (1 + 0.005) roughly: all to the second line.
+  // 0.995 = what is left a side; self-financing nu = (1 - 0.005) / (1 + 0.005) roughly: all to the second
+  // line.
   const SizedMove sized = bench.size({0.0, 1.0, 0.0}, 0.99004975);
   REQUIRE(sized.orders.size() == 2);
   CHECK_FALSE(sized.account_after.cash.is_negative());
@@ -133,7 +135,8 @@ TEST_CASE("sizing and fills: shares worth next to nothing do not take for ever")
   ledger::Account account{dec("10.01"), {Decimal(), Decimal(), Decimal()}};
   std::vector<ledger::Row> rows;
   Sheet sheet{day("2025-01-01"), {}};
-  for (std::size_t line = 0; line < 2; ++line) sheet.orders.push_back({line, true, dec("1000000000000"), dec(price), {}});
+  for (std::size_t line = 0; line < 2; ++line)
+    sheet.orders.push_back({line, true, dec("1000000000000"), dec(price), {}});
   fill_sheet(account, rows, sheet, bench.today, bench.book);
   CHECK_FALSE(account.cash.is_negative());
   CHECK(account.cash < dec("0.1"));
@@ -144,7 +147,8 @@ TEST_CASE("fills: never more is sold than is held, and what is not held is not s
   const Bench bench({"1", "1"}, {"100", "30"}, {"5", "0"}, "10");
   ledger::Account account = bench.account;
   std::vector<ledger::Row> rows;
-  const Sheet sheet{day("2025-01-01"), {{0, false, dec("8"), dec("100"), {}}, {1, false, dec("3"), dec("30"), {}}}};
+  const Sheet sheet{day("2025-01-01"),
+                    {{0, false, dec("8"), dec("100"), {}}, {1, false, dec("3"), dec("30"), {}}}};
   fill_sheet(account, rows, sheet, bench.today, bench.book);
   CHECK(account.quantities == std::vector<Decimal>{Decimal(), Decimal()});
   CHECK(account.cash == dec("510"));
@@ -154,7 +158,8 @@ TEST_CASE("fills: without cash nothing is bought") {
   const Bench bench({"1", "0"}, {"100", "30"}, {"0", "0"}, "0");
   ledger::Account account = bench.account;
   std::vector<ledger::Row> rows;
-  fill_sheet(account, rows, {day("2025-01-01"), {{0, true, dec("8"), dec("100"), {}}, {1, true, dec("3"), dec("30"), {}}}},
+  fill_sheet(account, rows,
+             {day("2025-01-01"), {{0, true, dec("8"), dec("100"), {}}, {1, true, dec("3"), dec("30"), {}}}},
              bench.today, bench.book);
   CHECK(rows.empty());
   CHECK(account == bench.account);

@@ -80,7 +80,8 @@ TEST_CASE("snapshot: saved and loaded at every night, the run equals the uninter
 TEST_CASE("snapshot: a halted book stays halted") {
   const BookSettings book = harbour();
   Desk desk(book);
-  desk.night("2025-01-02", {{"61.20", "", ""}, {"10.05", "", ""}, {"250", "", ""}}, {Halt{"the desk", "a \"drill\"\n"}});
+  desk.night("2025-01-02", {{"61.20", "", ""}, {"10.05", "", ""}, {"250", "", ""}},
+             {Halt{"the desk", "a \"drill\"\n"}});
   CHECK(through_bytes(desk.state(), book).halted == desk.state().halted);
 }
 
@@ -101,7 +102,8 @@ struct Saved {
       CHECK_FALSE(loaded->state.strategy);
       CHECK(loaded->state.covariation.size() == 0);
       CHECK(std::holds_alternative<NeedsHistory>(process_night(
-          loaded->state, closes(settings, "2025-01-06", {{"61.20", "", ""}, {"10.05", "", ""}, {"250", "", ""}}), {},
+          loaded->state,
+          closes(settings, "2025-01-06", {{"61.20", "", ""}, {"10.05", "", ""}, {"250", "", ""}}), {},
           settings)));
     }
     return loaded->rebuild_because;
@@ -117,7 +119,8 @@ TEST_CASE("snapshot: other parameters of the learner ask for a rebuild, with the
         "the state was learned with other parameters than rule=exponentiated_gradient;m=3;eta=0.06");
   other = saved.book;
   other.strategy.rule = "buy_and_hold";
-  CHECK(saved.rebuild_because(other) == "the state is of rule exponentiated_gradient, the book runs buy_and_hold");
+  CHECK(saved.rebuild_because(other) ==
+        "the state is of rule exponentiated_gradient, the book runs buy_and_hold");
   other = saved.book;
   other.gate.half_life_days = 100;
   CHECK(saved.rebuild_because(other) == "the covariation was learned with another half-life");
@@ -151,7 +154,8 @@ TEST_CASE("snapshot: a damaged learner asks for a rebuild, whichever byte it is"
 TEST_CASE("snapshot: a desk text that is not this book's is refused, and no part of it is taken") {
   const Saved saved;
   const auto refused = [&](const BookSettings& settings, const std::string& desk) {
-    const Result<LoadedState> loaded = load_snapshot({desk, saved.bytes.strategy, saved.bytes.covariation}, settings);
+    const Result<LoadedState> loaded =
+        load_snapshot({desk, saved.bytes.strategy, saved.bytes.covariation}, settings);
     REQUIRE_FALSE(loaded);
     CHECK(loaded.error().kind == ErrorKind::corrupted);
     CHECK(loaded.error().place == "book " + settings.name);
@@ -205,14 +209,19 @@ TEST_CASE("record: canonical bytes are JSON with sorted keys and the promised me
   const Night night = desk.night("2025-01-03", {{"30.70", "0.07", "2"}, {"10.15", "", ""}, {"249", "", ""}});
   const nlohmann::json parsed = record(night);
   CHECK(parsed.dump() == night.bytes);
-  for (const char* key : {"date", "relatives", "wanted", "held_before", "held_after", "verdict", "cost_bp",
-                          "growth_saved_bp_year", "payback_days", "horizon_days", "cost_paid", "wealth_net",
-                          "wealth_frictionless", "reason", "moves_to", "numerical_error", "turnover", "lines"}) {
+  for (const char* key :
+       {"date", "relatives", "wanted", "held_before", "held_after", "verdict", "cost_bp",
+        "growth_saved_bp_year", "payback_days", "horizon_days", "cost_paid", "wealth_net",
+        "wealth_frictionless", "reason", "moves_to", "numerical_error", "turnover", "lines"}) {
     CAPTURE(key);
     CHECK(parsed.contains(key));
   }
-  CHECK(parsed["closes"][0] == nlohmann::json({{"instrument", "ALDER"}, {"date", "2025-01-03"}, {"revision", 0},
-                                               {"close", "30.7"}, {"dividend", "0.07"}, {"split", "2"}}));
+  CHECK(parsed["closes"][0] == nlohmann::json({{"instrument", "ALDER"},
+                                               {"date", "2025-01-03"},
+                                               {"revision", 0},
+                                               {"close", "30.7"},
+                                               {"dividend", "0.07"},
+                                               {"split", "2"}}));
   CHECK(parsed["settings"] == book.digest);
   CHECK_FALSE(parsed.contains("batch"));
   for (const char* key : {"relatives", "wanted", "held_before", "held_after", "numerical_error"}) {
@@ -223,7 +232,8 @@ TEST_CASE("record: canonical bytes are JSON with sorted keys and the promised me
 
 TEST_CASE("record: history_day takes no other bytes for a night") {
   for (const char* text : {"", "{}", "[]", "null", "{\"closes\":1,\"relatives\":{},\"date\":\"2025-01-02\"}",
-                           "{\"closes\":[],\"relatives\":{},\"date\":7}", "{\"closes\":[],\"relatives\":{},\"date\":\"2025-13-02\"}",
+                           "{\"closes\":[],\"relatives\":{},\"date\":7}",
+                           "{\"closes\":[],\"relatives\":{},\"date\":\"2025-13-02\"}",
                            "{\"closes\":[{}],\"relatives\":{},\"date\":\"2025-01-02\"}",
                            "{\"closes\":[{\"instrument\":1}],\"relatives\":{},\"date\":\"2025-01-02\"}",
                            "{\"closes\":[1],\"relatives\":[],\"date\":\"2025-01-02\"}", "\xff\xfe"}) {

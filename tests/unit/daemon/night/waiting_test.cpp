@@ -17,8 +17,8 @@ using Reasons = std::vector<std::string>;
 TEST_CASE("waiting: each missing close is named with its date") {
   const BookSettings book = harbour();
   const BookState start = initial_state(book);
-  CHECK(waiting_reasons(process_night(start, closes(book, "2025-01-02", {{"", "", ""}, {"10", "", ""}, {"", "", ""}}), {},
-                                      book)) ==
+  CHECK(waiting_reasons(process_night(
+            start, closes(book, "2025-01-02", {{"", "", ""}, {"10", "", ""}, {"", "", ""}}), {}, book)) ==
         Reasons{"2025-01-02: no close of ALDER yet", "2025-01-02: no close of COPPER yet"});
   CHECK(waiting_reasons(process_night(start, {day("2025-01-02"), {}}, {}, book)).size() == 3);
 }
@@ -44,7 +44,8 @@ TEST_CASE("waiting: closed days of the calendar are stepped over, the start too"
   book.start.date = day("2025-01-04");  // a Saturday
   book.calendar.closed = {day("2025-01-06")};
   CHECK(next_date(initial_state(book), book) == day("2025-01-07"));
-  CHECK(waiting_reasons(process_night(initial_state(book), closes(book, "2025-01-06", quotes), {}, book)).size() == 1);
+  CHECK(waiting_reasons(process_night(initial_state(book), closes(book, "2025-01-06", quotes), {}, book))
+            .size() == 1);
   Desk desk(book);
   CHECK(desk.night("2025-01-07", quotes).date == day("2025-01-07"));
 }
@@ -54,7 +55,8 @@ TEST_CASE("waiting: a calendar of any dates takes each later one, and no earlier
   book.calendar.any = true;
   Desk desk(book);
   CHECK_FALSE(next_date(desk.state(), book));
-  CHECK(waiting_reasons(process_night(desk.state(), closes(book, "2025-01-01", quotes), {}, book)).size() == 1);
+  CHECK(waiting_reasons(process_night(desk.state(), closes(book, "2025-01-01", quotes), {}, book)).size() ==
+        1);
   desk.night("2025-01-04", quotes);
   desk.night("2025-02-09", quotes);
   CHECK(waiting_reasons(process_night(desk.state(), closes(book, "2025-02-09", quotes), {}, book)) ==
@@ -74,9 +76,9 @@ TEST_CASE("waiting: numbers too large are said to be, and crash nothing") {
         for (const std::string& first : {most, least, std::string("1")}) {
           for (const std::string& second : {most, least, std::string("1")}) {
             for (const std::string& split : {std::string(""), most, least}) {
-              const Answer one =
-                  process_night(initial_state(book), closes(book, "2025-01-02", {{first, "", ""}, {second, "", ""}, {"1", "", ""}}),
-                                {}, book);
+              const Answer one = process_night(
+                  initial_state(book),
+                  closes(book, "2025-01-02", {{first, "", ""}, {second, "", ""}, {"1", "", ""}}), {}, book);
               if (!std::holds_alternative<Night>(one)) {
                 CHECK(waiting_reasons(one).size() == 1);
                 CHECK(waiting_reasons(one)[0].find("2025-01-02") == 0);
@@ -84,8 +86,10 @@ TEST_CASE("waiting: numbers too large are said to be, and crash nothing") {
               }
               const Answer two = process_night(
                   std::get<Night>(one).after,
-                  closes(book, "2025-01-03", {{second, split, split}, {first, "", split}, {"1", most, ""}}), {}, book);
-              if (std::holds_alternative<Waiting>(two)) CHECK(waiting_reasons(two)[0].find("2025-01-03") == 0);
+                  closes(book, "2025-01-03", {{second, split, split}, {first, "", split}, {"1", most, ""}}),
+                  {}, book);
+              if (std::holds_alternative<Waiting>(two))
+                CHECK(waiting_reasons(two)[0].find("2025-01-03") == 0);
             }
           }
         }
@@ -95,7 +99,8 @@ TEST_CASE("waiting: numbers too large are said to be, and crash nothing") {
   BookState rich = initial_state(book);
   book.start.cash = dec("99999999999999999999999999999999999");
   book.start.holdings = {{"ALDER", dec("999999999999999999")}};
-  const Reasons reasons = waiting_reasons(process_night(rich, closes(book, "2025-01-02", {{most, "", ""}, {"1", "", ""}, {"1", "", ""}}), {}, book));
+  const Reasons reasons = waiting_reasons(process_night(
+      rich, closes(book, "2025-01-02", {{most, "", ""}, {"1", "", ""}, {"1", "", ""}}), {}, book));
   CHECK(reasons[0].find("look for a close or a quantity far too large") != std::string::npos);
 }
 
@@ -108,8 +113,9 @@ TEST_CASE("waiting: wealth on paper that leaves the range of doubles") {
   Date date = day("2025-01-02");
   for (int n = 0; n < 60 && !waited; ++n) {
     const std::string up = "999999999999999999", down = "0.0000000001";
-    const ClosesOfTheDay today = closes(book, *next_date(state, book),
-                                        {{n % 2 != 0 ? up : down, "", ""}, {n % 2 != 0 ? down : up, "", ""}, {"1", "", ""}});
+    const ClosesOfTheDay today =
+        closes(book, *next_date(state, book),
+               {{n % 2 != 0 ? up : down, "", ""}, {n % 2 != 0 ? down : up, "", ""}, {"1", "", ""}});
     const Answer answer = process_night(state, today, {}, book);
     if (const Night* night = std::get_if<Night>(&answer)) {
       state = night->after;
@@ -135,13 +141,15 @@ TEST_CASE("waiting: interest that would take more than the cash") {
   book.cash.yearly_rate = dec("-0.9");
   Desk desk(book);
   desk.night("2025-01-02", quotes);
-  const Reasons reasons = waiting_reasons(process_night(desk.state(), closes(book, "2027-01-02", quotes), {}, book));
+  const Reasons reasons =
+      waiting_reasons(process_night(desk.state(), closes(book, "2027-01-02", quotes), {}, book));
   REQUIRE(reasons.size() == 1);
   CHECK(reasons[0].find("yearly_rate") != std::string::npos);
 }
 
 std::vector<Quote> moved(int n) {
-  return {{std::to_string(60 + n * n % 7), "", ""}, {std::to_string(10 + n * 3 % 5), "", ""}, {"250", "", ""}};
+  return {
+      {std::to_string(60 + n * n % 7), "", ""}, {std::to_string(10 + n * 3 % 5), "", ""}, {"250", "", ""}};
 }
 
 TEST_CASE("needs history: a state without its learner asks for its nights, and gets the same bits back") {
@@ -169,7 +177,8 @@ TEST_CASE("needs history: a state without its learner asks for its nights, and g
       CHECK(must_be_night(process_night(whole, today, {}, book, &history)).bytes == night.bytes);
       const History nonsense{{day("2020-01-01"), {1, 2, 3, 4}, {0, 0, 0, 0}}};
       CHECK(must_be_night(process_night(whole, today, {}, book, &nonsense)).bytes == night.bytes);
-      if (n < 2) CHECK(must_be_night(process_night(forgetful, today, {}, book, &nonsense)).bytes == night.bytes);
+      if (n < 2)
+        CHECK(must_be_night(process_night(forgetful, today, {}, book, &nonsense)).bytes == night.bytes);
 
       if (n > 0) {
         const std::optional<HistoryDay> learned = history_day(night.bytes);

@@ -113,7 +113,8 @@ TEST_CASE("exponentiated gradient: lines in another order give the same weights 
     learn(*plain, x);
     learn(*permuted, y);
   }
-  for (std::size_t i = 0; i < 5; ++i) CHECK(std::abs(permuted->weights()[i] - plain->weights()[order[i]]) < 1e-13);
+  for (std::size_t i = 0; i < 5; ++i)
+    CHECK(std::abs(permuted->weights()[i] - plain->weights()[order[i]]) < 1e-13);
 }
 
 TEST_CASE("exponentiated gradient: scaling all of a day's relatives changes nothing") {
@@ -202,7 +203,8 @@ TEST_CASE("exponentiated gradient: the stated error covers the distance to a lon
       reference.learn(x);
       const std::vector<double> weights = strategy->weights(), stated = strategy->numerical_error();
       for (std::size_t i = 0; i < c.m; ++i) {
-        const double off = static_cast<double>(std::abs(static_cast<long double>(weights[i]) - reference.weights[i]));
+        const double off =
+            static_cast<double>(std::abs(static_cast<long double>(weights[i]) - reference.weights[i]));
         REQUIRE(off <= stated[i]);
         worst_share = std::max(worst_share, off / stated[i]);
       }
@@ -225,8 +227,8 @@ TEST_CASE("exponentiated gradient: the stated error covers roundings that all go
       for (int day = 0; day < 2000; ++day) {
         learn(*strategy, {low, 1.0});
         reference.learn({low, 1.0});
-        const double off =
-            static_cast<double>(std::abs(static_cast<long double>(strategy->weights()[0]) - reference.weights[0]));
+        const double off = static_cast<double>(
+            std::abs(static_cast<long double>(strategy->weights()[0]) - reference.weights[0]));
         REQUIRE(off <= strategy->numerical_error()[0]);
       }
     }
@@ -237,8 +239,9 @@ TEST_CASE("exponentiated gradient: an absurd day is refused whole or leaves ever
   for (const double huge : {1e46, 1e150, 1e300, 1.7e308}) {
     const auto strategy = gradient(3, 1.0);
     const std::vector<std::uint8_t> absent(3, 0);
-    for (const std::vector<double>& x : {std::vector<double>{huge, 1.0, 1e-300}, std::vector<double>{1e-300, huge, 1.0},
-                                         std::vector<double>{1.0, 1e-300, huge}, std::vector<double>{huge, huge, 0.0}}) {
+    for (const std::vector<double>& x :
+         {std::vector<double>{huge, 1.0, 1e-300}, std::vector<double>{1e-300, huge, 1.0},
+          std::vector<double>{1.0, 1e-300, huge}, std::vector<double>{huge, huge, 0.0}}) {
       const std::string before = strategy->save();
       if (!strategy->learn({x, absent})) CHECK(strategy->save() == before);
       for (const double weight : strategy->weights()) CHECK(std::isfinite(weight));

@@ -37,7 +37,8 @@ TEST_CASE("state bytes: the documented layout") {
   expected += little_endian(258, 8);
   expected += little_endian(3, 8);
   // IEEE 754 binary64: 1.0 = 0x3FF0000000000000, -2.5 = 0xC004000000000000, the smallest subnormal = 1.
-  expected += little_endian(0x3FF0000000000000U, 8) + little_endian(0xC004000000000000U, 8) + little_endian(1, 8);
+  expected +=
+      little_endian(0x3FF0000000000000U, 8) + little_endian(0xC004000000000000U, 8) + little_endian(1, 8);
   expected += sha256_bytes(expected);
   CHECK(write_state(example()) == expected);
 }
@@ -75,13 +76,15 @@ TEST_CASE("state bytes: lengths that contradict the bytes at hand are refused") 
   const auto sealed = [](std::string body) { return body + sha256_bytes(body); };
   const std::string start = std::string("NWSTATE\0", 8) + little_endian(1, 4);
   const auto rest = [](std::uint64_t count, const std::string& doubles) {
-    return little_endian(2, 8) + std::string(32, 'd') + little_endian(0, 8) + little_endian(count, 8) + doubles;
+    return little_endian(2, 8) + std::string(32, 'd') + little_endian(0, 8) + little_endian(count, 8) +
+           doubles;
   };
   const std::uint64_t huge = std::numeric_limits<std::uint64_t>::max();
   CHECK(read_state(sealed(start + little_endian(1, 4) + "r" + rest(1, std::string(8, '\0')))));
   CHECK_FALSE(read_state(sealed(start + little_endian(0xFFFFFFFFU, 4) + "r" + rest(0, ""))));
   CHECK_FALSE(read_state(sealed(start + little_endian(1, 4) + "r" + rest(huge, std::string(8, '\0')))));
-  CHECK_FALSE(read_state(sealed(start + little_endian(1, 4) + "r" + rest(huge / 8 + 2, std::string(8, '\0')))));
+  CHECK_FALSE(
+      read_state(sealed(start + little_endian(1, 4) + "r" + rest(huge / 8 + 2, std::string(8, '\0')))));
   CHECK_FALSE(read_state(sealed(start + little_endian(1, 4) + "r" + rest(0, std::string(8, '\0')))));
   CHECK_FALSE(read_state(sealed(start + little_endian(1, 4) + "r" + rest(1, std::string(9, '\0')))));
   CHECK_FALSE(read_state(sealed(start)));
@@ -94,7 +97,8 @@ TEST_CASE("saved state: held against the choice") {
   REQUIRE(load_state(mine, 1, 3, bytes));
   CHECK(load_state(mine, 1, 3, bytes)->days == 7);
 
-  const auto problem = [&](const Choice& choice, std::uint32_t format, std::size_t count, const std::string& from) {
+  const auto problem = [&](const Choice& choice, std::uint32_t format, std::size_t count,
+                           const std::string& from) {
     const Outcome<StateBytes> loaded = load_state(choice, format, count, from);
     return loaded ? std::string("taken") : loaded.error().problem;
   };
@@ -106,7 +110,8 @@ TEST_CASE("saved state: held against the choice") {
         "the state was learned with other parameters than rule=exponentiated_gradient;m=3;eta=0.1");
   CHECK(problem(mine, 1, 4, bytes) == "the state holds 3 values where 4 belong");
   const double infinity = std::numeric_limits<double>::infinity();
-  CHECK(problem(mine, 1, 3, save_state(mine, 1, 7, {0.0, infinity, -2.0})) == "value 1 of the state is not finite");
+  CHECK(problem(mine, 1, 3, save_state(mine, 1, 7, {0.0, infinity, -2.0})) ==
+        "value 1 of the state is not finite");
   CHECK(problem(mine, 1, 3, save_state(mine, 1, 7, {std::nan(""), 0.0, -2.0})) ==
         "value 0 of the state is not finite");
 }
@@ -117,7 +122,8 @@ TEST_CASE("choice: what decides the rule's behaviour decides the digest, and not
   CHECK(gradient.digest() == sha256_bytes("rule=exponentiated_gradient;m=3;eta=0.05"));
   CHECK(gradient.digest() != Choice{"exponentiated_gradient", 3, 0.05000000000000001, {}}.digest());
   CHECK(Choice{"buy_and_hold", 3, 0.05, {}}.digest() == Choice{"buy_and_hold", 3, 0.1, {}}.digest());
-  CHECK(Choice{"constant_mix", 2, 0.05, {0.25, 0.75}}.canonical_text() == "rule=constant_mix;m=2;weights=0.25,0.75,");
+  CHECK(Choice{"constant_mix", 2, 0.05, {0.25, 0.75}}.canonical_text() ==
+        "rule=constant_mix;m=2;weights=0.25,0.75,");
   CHECK(Choice{"constant_mix", 2, 0.05, {0.25, 0.75}}.digest() !=
         Choice{"constant_mix", 2, 0.05, {0.75, 0.25}}.digest());
 }

@@ -50,7 +50,8 @@ TEST_CASE("buy and hold: weights proportional to the products of the relatives")
     for (const long double value : grown) total += value;
     const std::vector<double> weights = strategy->weights(), stated = strategy->numerical_error();
     for (std::size_t i = 0; i < 6; ++i) {
-      const double off = static_cast<double>(std::abs(static_cast<long double>(weights[i]) - grown[i] / total));
+      const double off =
+          static_cast<double>(std::abs(static_cast<long double>(weights[i]) - grown[i] / total));
       REQUIRE(off <= stated[i]);
       REQUIRE(stated[i] < 1e-10);
     }
