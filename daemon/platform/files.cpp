@@ -158,6 +158,18 @@ Result<void> write_file_atomically(const fs::path& path, std::string_view bytes,
   return flush_folder(folder_of(path));
 }
 
+Result<void> rename_durably(const fs::path& from, const fs::path& to) {
+  {
+    const Descriptor descriptor(::open(from.c_str(), O_RDONLY | O_CLOEXEC));
+    if (!descriptor || ::fsync(descriptor.number()) != 0) {
+      return failure(file_error(from, "cannot be flushed to the disk", errno));
+    }
+  }
+  if (::rename(from.c_str(), to.c_str()) != 0)
+    return failure(file_error(to, "cannot be put in place", errno));
+  return flush_folder(folder_of(to));
+}
+
 Result<void> ensure_directory(const fs::path& path) {
   std::error_code error;
   if (fs::is_directory(path, error)) return {};

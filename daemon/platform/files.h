@@ -24,6 +24,9 @@ Result<std::string> read_file(const std::filesystem::path& path, std::size_t byt
 Result<void> write_file_atomically(const std::filesystem::path& path, std::string_view bytes,
                                    unsigned mode = 0644);
 
+// Flushes the bytes of `from` to the disk, renames it over `to` (same folder), flushes the folder.
+Result<void> rename_durably(const std::filesystem::path& from, const std::filesystem::path& to);
+
 // Makes the folder and its missing parents, flushed to the disk. Nothing to do if it is there; an Error if
 // something else is.
 Result<void> ensure_directory(const std::filesystem::path& path);

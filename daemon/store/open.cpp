@@ -8,8 +8,8 @@
 #include <string>
 #include <system_error>
 
+#include "daemon/platform/files.h"
 #include "daemon/store/database_store.h"
-#include "daemon/store/durable.h"
 #include "daemon/store/schema.h"
 #include "daemon/store/sqlite_error.h"
 
@@ -42,7 +42,7 @@ void harden(SQLite::Database& database) {
 
 Result<void> require_right(const fs::path& path, int right, const char* problem) {
   if (::faccessat(AT_FDCWD, path.c_str(), right, AT_EACCESS) != 0) {
-    return failure(system_error(path, problem, errno));
+    return failure(platform::file_error(path, problem, errno));
   }
   return {};
 }
@@ -61,13 +61,13 @@ Result<bool> look_at(const fs::path& file) {
   std::error_code error;
   const fs::file_status status = fs::status(file, error);
   if (status.type() == fs::file_type::not_found) return false;
-  if (error) return failure(system_error(file, "cannot be looked at", error.value()));
+  if (error) return failure(platform::file_error(file, "cannot be looked at", error.value()));
   if (!fs::is_regular_file(status)) {
     return failure(Error{ErrorKind::storage, file.string(), "is no regular file", "",
                          "move it away, or name another data_dir in the settings"});
   }
   const std::uintmax_t size = fs::file_size(file, error);
-  if (error) return failure(system_error(file, "cannot be looked at", error.value()));
+  if (error) return failure(platform::file_error(file, "cannot be looked at", error.value()));
   if (size < bytes_min) {
     // Databases are put in place whole, so this one was cut. SQLite would take it for a new, empty one.
     return failure(Error{ErrorKind::corrupted, file.string(), "is too short for a database",
@@ -107,7 +107,7 @@ Result<void> create(const fs::path& file, const std::vector<Migration>& migratio
     database.exec("PRAGMA synchronous = FULL");
     return migrate(database, file, 0, migrations);
   });
-  if (made) made = rename_durably(temporary, file);
+  if (made) made = platform::rename_durably(temporary, file);
   if (!made) fs::remove(temporary, error);
   return made;
 }

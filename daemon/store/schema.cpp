@@ -10,7 +10,7 @@
 #include <string>
 #include <system_error>
 
-#include "daemon/store/durable.h"
+#include "daemon/platform/files.h"
 #include "daemon/store/query.h"
 #include "daemon/store/sqlite_error.h"
 #include "strategies/digest/sha256.h"
@@ -113,7 +113,7 @@ Result<void> check_length(SQLite::Database& database, const std::filesystem::pat
   const std::uintmax_t log_bytes = std::filesystem::file_size(file.string() + "-wal", error);
   if (!error && log_bytes > 0) return {};
   const std::uintmax_t bytes = std::filesystem::file_size(file, error);
-  if (error) return failure(system_error(file, "cannot be looked at", error.value()));
+  if (error) return failure(platform::file_error(file, "cannot be looked at", error.value()));
   const auto page_bytes = static_cast<std::uintmax_t>(database.execAndGet("PRAGMA page_size").getInt64());
   if (bytes % page_bytes == 0) return {};
   return failure(error_at(file, ErrorKind::corrupted, "the database's last page is cut",
@@ -188,7 +188,7 @@ Result<void> copy_database(SQLite::Database& database, const std::filesystem::pa
     SQLite::Database copy(temporary, SQLite::OPEN_READONLY | SQLite::OPEN_NOMUTEX);
     return check_damage(copy, temporary);
   });
-  if (copied) copied = rename_durably(temporary, target);
+  if (copied) copied = platform::rename_durably(temporary, target);
   if (!copied) {
     std::filesystem::remove(temporary, ignored);
     Error error = copied.error();
