@@ -55,8 +55,7 @@ std::string with_other_costs(const gate::Problem& problem, bool pays) {
   const auto word = [&](bool other) {
     return other == pays ? std::string("the same") : "`" + verdict_word(other) + "`";
   };
-  if (halved == pays && doubled == pays)
-    return " The verdict would be the same with costs halved or doubled.";
+  if (halved == doubled) return " The verdict would be " + word(halved) + " with costs halved or doubled.";
   return fmt::format(" The verdict would be {} with costs halved, and {} with costs doubled.", word(halved),
                      word(doubled));
 }
