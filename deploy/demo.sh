@@ -6,7 +6,11 @@ cd "$(dirname "$0")/.."
 . deploy/packages.sh
 
 once=false
-[ "${1:-}" = "--once" ] && once=true
+case "${1:-}" in
+  "") ;;
+  --once) once=true ;;
+  *) echo "usage: deploy/demo.sh [--once]" >&2; exit 2 ;;
+esac
 folder=$PWD/var/demo
 program=$PWD/build/release/nightweigh
 settings=$folder/nightweigh.yaml

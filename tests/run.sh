@@ -4,6 +4,10 @@
 set -euo pipefail
 cd "$(dirname "$0")/.."
 . deploy/packages.sh
+case "${1:-}" in
+  "" | --quick) ;;
+  *) echo "usage: tests/run.sh [--quick]" >&2; exit 2 ;;
+esac
 
 # shellcheck disable=SC2086
 progress "packages" install_packages $packages_build $packages_test

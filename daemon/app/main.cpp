@@ -60,5 +60,10 @@ int main(int argc, char** argv) {
     std::cerr << "nightweigh: a fault of the program: " << error.what() << "\n";
     return nightweigh::commands::refused;
   }
+  std::cout.flush();
+  if (!std::cout) {
+    std::cerr << "nightweigh: standard output cannot be written; is the disk full, or the reader gone?\n";
+    return nightweigh::commands::refused;
+  }
   return exit_code;
 }

@@ -48,8 +48,8 @@ Result<std::string> book_name(const Common& common, const settings::Settings& se
   }
   if (common.book.empty() && settings.books.size() == 1) return settings.books.front().name;
   return failure({ErrorKind::not_found, "--book",
-                  common.book.empty() ? "which book is meant?" : "there is no such book", common.book,
-                  "the settings have: " + names});
+                  common.book.empty() ? "which book is meant is not said" : "there is no such book",
+                  common.book, "the settings have: " + names});
 }
 
 Result<RunningEndpoints> running_endpoints(const settings::Settings& settings) {

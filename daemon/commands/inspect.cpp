@@ -76,6 +76,15 @@ DatabaseReport inspect_database(const settings::Settings& settings, Errors& prob
     if (!head) problems.push_back(head.error());
     if (!snapshot) problems.push_back(snapshot.error());
     if (head) report.heads[book.name] = *head;
+    Result<std::optional<store::JournalEntry>> entry = (*store)->newest(book.name, "settings");
+    if (entry && *entry && snapshot && *snapshot) {
+      const std::string key = settings::fixed_key_that_differs((*entry)->bytes, book.resolved_text);
+      if (!key.empty()) {
+        problems.push_back({ErrorKind::bad_settings, "book " + book.name + ", key " + key,
+                            "cannot change after the book's first night", "",
+                            "set it back, or start a new book under another name"});
+      }
+    }
     if (snapshot && *snapshot) report.last_nights[book.name] = (*snapshot)->date.to_string();
   }
   return report;
@@ -107,8 +116,9 @@ int run(const Common& common) {
     for (const Error& problem : problems) out["problems"].push_back(problem.message());
     std::cout << out.dump() << "\n";
   } else {
-    std::cout << "settings  " << settings->file.string() << ": good\n"
-              << "http      " << endpoint_text(settings->service.http) << "\n"
+    std::cout << "settings  " << settings->file.string()
+              << (problems.empty() ? ": good\n" : ": readable, but see the problems\n") << "http      "
+              << endpoint_text(settings->service.http) << "\n"
               << "feed      " << endpoint_text(settings->service.feed_socket) << "\n"
               << "drop      "
               << (settings->service.drop_dir.empty() ? "off" : settings->service.drop_dir.string()) << "\n"

@@ -1,3 +1,4 @@
+#include <cmath>
 #include <iostream>
 #include <memory>
 
@@ -13,6 +14,11 @@ struct Filter {
   int limit = 20;
   bool reasons = false;
 };
+
+// Whole days, begun ones counted, as in the reason's words.
+std::string days(const nlohmann::json& value) {
+  return value.is_number() ? number(std::ceil(value.get<double>()), 0) : "-";
+}
 
 std::string query(const Filter& filter) {
   std::string text = "?limit=" + std::to_string(filter.limit);
@@ -42,7 +48,7 @@ int run(const Common& common, const Filter& filter) {
                                                  ">horizon d", ">turnover %", ">lines", "sheet", "hash"}};
   for (const nlohmann::json& row : page["rows"]) {
     rows.push_back({row["date"], row["verdict"], amount(row["growth_saved_bp_year"]), amount(row["cost_bp"]),
-                    number(row["payback_days"], 0), number(row["horizon_days"], 0), percent(row["turnover"]),
+                    days(row["payback_days"]), days(row["horizon_days"]), percent(row["turnover"]),
                     number(row["lines"], 0), text_or_dash(row["sheet"]),
                     row["hash"].get<std::string>().substr(0, 12)});
   }

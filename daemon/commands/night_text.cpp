@@ -1,6 +1,7 @@
 #include "daemon/commands/night_text.h"
 
 #include "daemon/commands/command.h"
+#include "daemon/domain/decimal.h"
 
 namespace nightweigh::commands {
 
@@ -10,6 +11,12 @@ namespace {
 
 std::string fixed(const std::string& text, std::size_t digits) {
   return text.substr(0, digits);
+}
+
+// Money rounded to cents for reading; the JSON has every digit.
+std::string money(const json& amount) {
+  const std::optional<Decimal> exact = Decimal::parse(amount.get<std::string>(), 36, 36);
+  return exact ? exact->rounded_half_even(2).to_string_padded(2) : amount.get<std::string>();
 }
 
 // What the ledger's rows say of tonight.
@@ -77,7 +84,9 @@ std::string sheet_text(const json& sheet) {
   }
   const std::string state = sheet.value("state", "");
   return "\nOrder sheet" + (state.empty() ? "" : " (" + state + ")") + "\n" + table(cells) +
-         "A proposal for a reviewer: nothing is sent to a market.\n";
+         (state == "closed"
+              ? "It counts as filled: this version assumes fills, and sends nothing to a market.\n"
+              : "A proposal for a reviewer: nothing is sent to a market.\n");
 }
 
 std::string night_text(const json& night) {
@@ -85,13 +94,15 @@ std::string night_text(const json& night) {
                      std::to_string(night["night"].get<int>()) + " of " + night["date"].get<std::string>() +
                      "\n\n" + wrapped(night["reason"], "  ") + "\n" + lines_text(night) +
                      sheet_text(night["sheet"]);
-  if (night["filled_sheet"].is_string()) {
-    text += "\nThe sheet of " + night["filled_sheet"].get<std::string>() +
-            " was filled tonight, before the decision.\n";
+  for (const json& filled : night["filled_sheets"]) {
+    text += filled == night["date"]
+                ? "\nTonight's sheet counts as filled at tonight's closes, after the decision.\n"
+                : "\nThe sheet of " + filled.get<std::string>() +
+                      " counts as filled tonight, before the decision.\n";
   }
   text += ledger_text(night["ledger"]);
   const json& account = night["account"];
-  text += "\nNet asset value " + account["net_asset_value"].get<std::string>();
+  text += "\nNet asset value " + money(account["net_asset_value"]);
   for (const auto& [currency, cash] : account["cash"].items())
     text += " " + currency + ", of it cash " + cash.get<std::string>();
   text += "\nWealth since the start: net of costs " + number(night["wealth_net"], 6) + ", frictionless " +

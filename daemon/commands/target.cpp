@@ -22,10 +22,9 @@ int run(const Common& common) {
   }
   const nlohmann::json target = nlohmann::json::parse(*body);
   std::cout << target["book"].get<std::string>() << ", night of " << target["date"].get<std::string>()
-            << (target["stale"].get<bool>() ? " (stale: a later night is due; see attention of the book)"
-                                            : "")
-            << "\n\n"
-            << wrapped(target["reason"], "  ") << "\n";
+            << (target["stale"].get<bool>() ? " (stale)" : "") << "\n";
+  for (const nlohmann::json& reason : target["attention"]) std::cout << wrapped(reason, "  ");
+  std::cout << "\n" << wrapped(target["reason"], "  ") << "\n";
   const nlohmann::json& emitted = target["emitted"];
   const nlohmann::json& moves_to = target["moves_to"];
   std::vector<std::vector<std::string>> rows = {

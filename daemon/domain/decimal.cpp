@@ -277,6 +277,11 @@ Decimal Decimal::rounded_down(int scale) const {
   return scaled(coefficient_ / power_of_ten(scale_ - scale), scale);
 }
 
+Decimal Decimal::rounded_floor(int scale) const {
+  const Decimal down = rounded_down(scale);
+  return *this < down ? down - scaled(1, scale) : down;
+}
+
 Decimal Decimal::floor_to_multiple(const Decimal& unit) const {
   return multiply_divide_down(*this, Decimal(1), unit, 0) * unit;
 }

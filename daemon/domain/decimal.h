@@ -58,7 +58,8 @@ class Decimal {
 
   // Rounded to `scale` (>= 0) digits after the point.
   Decimal rounded_half_even(int scale) const;
-  Decimal rounded_down(int scale) const;  // toward zero
+  Decimal rounded_down(int scale) const;   // toward zero
+  Decimal rounded_floor(int scale) const;  // toward minus infinity
 
   // The whole multiple of `unit` (> 0) nearest to *this that is not beyond it, toward zero.
   Decimal floor_to_multiple(const Decimal& unit) const;

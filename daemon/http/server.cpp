@@ -325,19 +325,6 @@ class Core : public std::enable_shared_from_this<Core> {
  private:
   using Place = std::list<Connection>::iterator;
 
-  // Removes a connection when its coroutine ends, in whichever way.
-  class Leave {
-   public:
-    Leave(Core& core, Place place) : core_(core), place_(place) {}
-    Leave(const Leave&) = delete;
-    Leave& operator=(const Leave&) = delete;
-    ~Leave() { core_.left(place_); }
-
-   private:
-    Core& core_;
-    Place place_;
-  };
-
   net::awaitable<void> accept_all();
   net::awaitable<void> serve(Place place);
   net::awaitable<void> refuse_connection(Place place);
@@ -454,14 +441,11 @@ net::awaitable<void> Core::accept_all() {
     if (!is_over) ++served_;
     net::co_spawn(
         acceptor_.get_executor(),
-        [self = shared_from_this(), place]() -> net::awaitable<void> {
-          const Leave leave(*self, place);
-          if (place->is_over)
-            co_await self->refuse_connection(place);
-          else
-            co_await self->serve(place);
+        [self = shared_from_this(), place] {
+          return place->is_over ? self->refuse_connection(place) : self->serve(place);
         },
-        [self = shared_from_this()](const std::exception_ptr& exception) {
+        [self = shared_from_this(), place](const std::exception_ptr& exception) {
+          self->left(place);
           if (!exception) return;
           try {
             std::rethrow_exception(exception);

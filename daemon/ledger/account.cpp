@@ -39,7 +39,7 @@ TradeCash trade_cash(const Decimal& quantity, const TradeTerms& terms) {
   const Decimal one(1);
   TradeCash out;
   out.price = terms.close * (quantity.is_negative() ? one - terms.half_spread : one + terms.half_spread);
-  out.proceeds = (-quantity * out.price).rounded_half_even(terms.minor_units);
+  out.proceeds = (-quantity * out.price).rounded_floor(terms.minor_units);
   out.commission = (quantity.abs() * terms.close * terms.commission).rounded_half_even(terms.minor_units);
   return out;
 }

@@ -42,8 +42,8 @@ struct TradeTerms {
   int minor_units = 2;
 };
 
-// What a trade of `quantity` (> 0 buys, < 0 sells) does to cash: price and fee rounded half to even to the
-// minor unit, each by itself.
+// What a trade of `quantity` (> 0 buys, < 0 sells) does to cash. What it brings or takes is rounded to the
+// minor unit against the book (so that no trade ever gains by rounding), its commission half to even.
 struct TradeCash {
   Decimal price;       // a share, spread included
   Decimal proceeds;    // change of cash by the trade itself

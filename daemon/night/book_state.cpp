@@ -1,6 +1,5 @@
 #include "daemon/night/book_state.h"
 
-
 namespace nightweigh::night {
 
 strategies::Choice strategy_choice(const BookSettings& settings) {

@@ -42,15 +42,16 @@ struct BookState {
   std::optional<Date> last_night;
   std::uint64_t nights = 0;
   ledger::Account account;
-  std::vector<Decimal> closes;  // of the last night, one an instrument
-  std::vector<double> wanted;   // of the last night, one a line
+  std::vector<Decimal> closes;   // of the last night, one an instrument
+  std::vector<double> wanted;    // of the last night, one a line
   std::optional<Sheet> pending;  // approved, to be filled at the next night's close
   std::optional<Emitted> emitted;
   Decimal opening_value;  // net asset value of the first night before any fill
   double log_wealth_frictionless = 0;
   std::optional<std::string> halted;  // why, where the book is halted
 
-  // Null, or of other parameters than the settings name: process_night asks for the history and rebuilds.
+  // Null, or of another rule or number of lines: process_night asks for the history and rebuilds. A state
+  // learned with other parameters must come through load_snapshot, which drops the learner.
   std::shared_ptr<const strategies::Strategy> strategy;
   gate::Covariation covariation;  // size() == 0: rebuilt with the strategy
 };

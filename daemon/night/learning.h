@@ -11,7 +11,8 @@ namespace nightweigh::night {
 
 // Total-return relative of each line: (split * close + dividend) / previous close, the dividend a share
 // before the split; cash: 1 + yearly_rate * calendar days / 365. The numerator is exact before the division.
-std::vector<double> price_relatives(const BookState& state, const ClosesOfTheDay& closes, const BookSettings& settings);
+std::vector<double> price_relatives(const BookState& state, const ClosesOfTheDay& closes,
+                                    const BookSettings& settings);
 
 struct Learner {
   std::shared_ptr<const strategies::Strategy> strategy;
@@ -23,7 +24,8 @@ strategies::Outcome<Learner> rebuilt_learner(const BookSettings& settings, const
 
 // `learner` after one more day.
 strategies::Outcome<Learner> learned(const Learner& learner, const BookSettings& settings,
-                                     const std::vector<double>& relatives, const std::vector<std::uint8_t>& absent);
+                                     const std::vector<double>& relatives,
+                                     const std::vector<std::uint8_t>& absent);
 
 // Whether the state's learner is one that the settings ask for.
 bool has_learner(const BookState& state, const BookSettings& settings);

@@ -46,26 +46,29 @@ std::string_view name_of(Verdict verdict);
 
 // Everything that was known and decided; record.h turns it into the bytes that are hashed.
 struct Evidence {
-  std::vector<Close> closes;               // used, one an instrument
-  std::vector<double> relatives;           // one a line, cash last; 1 on the first night
-  std::vector<double> held_before;         // at tonight's closes, before any fill of this night
-  std::vector<double> held_after;          // after all fills and costs of this night
-  std::vector<double> wanted;              // after learning
-  std::vector<double> numerical_error;     // of wanted, absolute
+  std::vector<Close> closes;            // used, one an instrument
+  std::vector<double> relatives;        // one a line, cash last; 1 on the first night
+  std::vector<double> held_before;      // at tonight's closes, before any fill of this night
+  std::vector<double> held_after;       // after all fills and costs of this night
+  std::vector<double> wanted;           // after learning
+  std::vector<double> numerical_error;  // of wanted, absolute
   Verdict verdict = Verdict::stay;
-  std::string reason;                      // in words
-  gate::Decision decision;                 // the best candidate
-  std::optional<gate::Worth> sized;        // a candidate that pays, in whole lots and priced again
-  bool below_one_lot = false;              // a candidate that pays, but rounds to no order at all
+  std::string reason;                           // in words
+  gate::Decision decision;                      // the best candidate
+  std::optional<gate::Worth> sized;             // a candidate that pays, in whole lots and priced again
+  bool below_one_lot = false;                   // a candidate that pays, but rounds to no order at all
   std::optional<std::vector<double>> moves_to;  // weights after the sized candidate
-  std::vector<gate::Edges> edges;          // one a line; empty where the gate moves
-  std::optional<Sheet> sheet;              // of a `move` night
-  double turnover = 0;                     // of the sheet: sum of |traded value| / (2 NAV), cash excluded
-  std::optional<Date> filled_sheet;        // the night whose sheet was filled tonight
-  std::vector<ledger::Row> rows;           // every change of the account tonight
-  Decimal value_before_fills;              // net asset value at tonight's closes
+  std::vector<gate::Edges> edges;               // one a line; empty where the gate moves
+  std::optional<Sheet> sheet;                   // of a `move` night
+  double turnover = 0;              // of the sheet: sum of |traded value| / (2 NAV), cash excluded
+  std::vector<Date> filled_sheets;  // the nights whose sheets were filled tonight
+  std::vector<ledger::Row> rows;    // every change of the account tonight
+  Decimal value_before_fills;       // net asset value at tonight's closes
   Decimal value_after;
-  double cost_paid = 0;                    // -ln(value after / value before fills), nats
+  // False before any line has moved: the covariation is then the identity, good enough for the band, which
+  // does not depend on its level, but no measure of growth or of days.
+  bool saving_is_known = false;
+  double cost_paid = 0;  // -ln(value after / value before fills), nats
   double response = 0;
 
   // The figures that the log shows: of the sized move, else of the best candidate; null where none moves.
@@ -97,7 +100,8 @@ std::optional<Date> next_date(const BookState& state, const BookSettings& settin
 
 // Precondition: state belongs to settings (initial_state, an earlier night, or load_snapshot). `history` is
 // used only for a rebuild; giving it when none is needed changes nothing.
-Answer process_night(const BookState& state, const ClosesOfTheDay& closes, const std::vector<DeskEvent>& events,
-                     const BookSettings& settings, const History* history = nullptr);
+Answer process_night(const BookState& state, const ClosesOfTheDay& closes,
+                     const std::vector<DeskEvent>& events, const BookSettings& settings,
+                     const History* history = nullptr);
 
 }  // namespace nightweigh::night

@@ -88,6 +88,7 @@ gate::Problem decide(Evidence& evidence, const BookState& state, const ClosesOfT
                         evidence.response,
                         {settings.gate.extra_gain, settings.gate.payback_days_max, settings.gate.always}};
   evidence.decision = gate::decide(problem);
+  evidence.saving_is_known = !problem.covariation.isIdentity(0);
   evidence.verdict = Verdict::stay;
   if (evidence.decision.worth.pays) {
     SizedMove sized = size_move(state.account, evidence.held_after, to_std(evidence.decision.move.weights),
@@ -166,7 +167,7 @@ Answer process(const BookState& before, const ClosesOfTheDay& closes, const std:
   evidence.held_before = marked_weights(state.account, prices);
   if (state.pending) {
     fill_sheet(state.account, evidence.rows, *state.pending, closes, settings);
-    evidence.filled_sheet = state.pending->date;
+    evidence.filled_sheets.push_back(state.pending->date);
     state.pending.reset();
   }
 
@@ -204,7 +205,7 @@ Answer process(const BookState& before, const ClosesOfTheDay& closes, const std:
     state.emitted = Emitted{closes.date, *evidence.moves_to};
     if (settings.execution_lag_nights == 0) {
       fill_sheet(state.account, evidence.rows, *evidence.sheet, closes, settings);
-      evidence.filled_sheet = closes.date;
+      evidence.filled_sheets.push_back(closes.date);
       evidence.value_after = ledger::net_asset_value(state.account, prices);
       evidence.held_after = marked_weights(state.account, prices);
     } else {

@@ -27,12 +27,10 @@ std::string trading_days(double days) {
   return whole <= 1 ? "in 1 trading day" : fmt::format("in {:.0f} trading days", whole);
 }
 
-std::string figures_in_words(const gate::Worth& worth, const gate::Problem& problem) {
+std::string figures_in_words(const gate::Worth& worth, bool saving_is_known) {
   const std::string cost = worth.cost > 0 ? fmt::format(" Cost {} once.", basis_points(worth.cost))
                                           : std::string(" It costs nothing.");
-  // Before any line has moved the covariation is the identity: good enough for the band, which does not
-  // depend on its level, but no measure of growth or of days.
-  if (problem.covariation.isIdentity(0)) {
+  if (!saving_is_known) {
     return cost + " What it saves and when it pays back cannot be said before the lines have moved.";
   }
   if (!(worth.growth_saved > 0) || !worth.payback_days) return cost + " It saves no growth.";
@@ -41,7 +39,7 @@ std::string figures_in_words(const gate::Worth& worth, const gate::Problem& prob
          fmt::format(
              " Saves {} of growth a year if the wanted mix is the right one. Pays back {}; horizon {}.",
              basis_points(worth.growth_saved * trading_days_a_year), trading_days(*worth.payback_days),
-             has_horizon ? fmt::format("{:.0f} days", *worth.horizon_days) : std::string("none"));
+             has_horizon ? fmt::format("{:.0f} days", std::ceil(*worth.horizon_days)) : std::string("none"));
 }
 
 std::string verdict_word(bool pays) {
@@ -100,7 +98,7 @@ std::string stay_inside(const Evidence& evidence, const gate::Problem& problem, 
   if (triggers.factor_below && (!factor || 1 / *triggers.factor_below < *factor))
     factor = triggers.factor_below;
   if (factor) {
-    text += fmt::format("; with the other closes unchanged, a close of {} at {} would move it",
+    text += fmt::format("; with all else unchanged, a close of {} near {} would move it",
                         settings.line_name(*line), price(closes.closes[*line]->close, *factor));
   }
   return text + ".";
@@ -114,8 +112,9 @@ std::string reason_in_words(const Evidence& evidence, const gate::Problem& probl
   if (evidence.verdict == Verdict::withheld) {
     return text + " The rule has learned tonight and the holdings are marked, but no sheet is made.";
   }
-  const std::string figures =
-      evidence.shown_worth() ? figures_in_words(*evidence.shown_worth(), problem) : std::string();
+  const std::string figures = evidence.shown_worth()
+                                  ? figures_in_words(*evidence.shown_worth(), evidence.saving_is_known)
+                                  : std::string();
   if (evidence.verdict == Verdict::move) {
     if (settings.gate.always) {
       return text + " This book trades to the wanted mix every night, whatever it costs." + figures;

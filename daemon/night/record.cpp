@@ -33,6 +33,12 @@ json by_line(const std::vector<double>& values, const BookSettings& settings) {
   return out;
 }
 
+json dates_json(const std::vector<Date>& dates) {
+  json out = json::array();
+  for (const Date date : dates) out.push_back(date.to_string());
+  return out;
+}
+
 json closes_json(const std::vector<Close>& closes) {
   json out = json::array();
   for (const Close& close : closes) {
@@ -118,6 +124,9 @@ std::string canonical_bytes(const Night& night, const BookSettings& settings) {
   const Evidence& evidence = night.evidence;
   const BookState& after = night.after;
   const gate::Worth* worth = evidence.shown_worth();
+  // Growth and days: null where there is no candidate, or nothing to measure them by yet.
+  const gate::Worth* measured = evidence.saving_is_known ? worth : nullptr;
+  const bool has_horizon = measured && measured->horizon_days && *measured->horizon_days > 0;
   json record = {
       {"book", settings.name},
       {"date", night.date.to_string()},
@@ -130,19 +139,19 @@ std::string canonical_bytes(const Night& night, const BookSettings& settings) {
       {"held_after", by_line(evidence.held_after, settings)},
       {"wanted", by_line(evidence.wanted, settings)},
       {"numerical_error", by_line(evidence.numerical_error, settings)},
-      {"moves_to", evidence.moves_to ? by_line(*evidence.moves_to, settings) : json()},
+      {"moves_to", evidence.sheet ? by_line(*evidence.moves_to, settings) : json()},
       {"verdict", name_of(evidence.verdict)},
       {"reason", evidence.reason},
       {"cost_bp", worth ? json(finite(1e4 * worth->cost)) : json()},
       {"growth_saved_bp_year",
-       worth ? json(finite(1e4 * trading_days_a_year * worth->growth_saved)) : json()},
-      {"payback_days", worth ? optional_number(worth->payback_days) : json()},
-      {"horizon_days", worth ? optional_number(worth->horizon_days) : json()},
+       measured ? json(finite(1e4 * trading_days_a_year * measured->growth_saved)) : json()},
+      {"payback_days", measured ? optional_number(measured->payback_days) : json()},
+      {"horizon_days", has_horizon ? optional_number(measured->horizon_days) : json()},
       {"turnover", finite(evidence.turnover)},
       {"lines", evidence.sheet ? evidence.sheet->orders.size() : 0},
       {"gate", gate_json(evidence, settings)},
       {"sheet", sheet_json(evidence, settings)},
-      {"filled_sheet", evidence.filled_sheet ? json(evidence.filled_sheet->to_string()) : json()},
+      {"filled_sheets", dates_json(evidence.filled_sheets)},
       {"ledger", rows_json(evidence.rows, settings)},
       {"account", account_json(night, settings)},
       {"cost_paid", finite(evidence.cost_paid)},

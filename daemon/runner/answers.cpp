@@ -61,11 +61,24 @@ BookViewPointer Answers::find(const std::string& book) const {
   return found == views_.end() ? nullptr : found->second;
 }
 
-// The last night is not the latest that there should be: closes wait, storage failed, or a trading day has
-// passed without its closes.
-bool Answers::is_stale(const BookView& view) const {
-  if (!view.waiting.empty() || !view.trouble.empty() || !view.last_night) return true;
+// A trading day has passed without its night: closes are due.
+bool Answers::is_overdue(const BookView& view) const {
   return view.next_night && *view.next_night < platform::date_in_zone(clock_.now(), view.settings->time_zone);
+}
+
+// The last night is not the latest that there should be: closes wait, storage failed, or closes are due.
+bool Answers::is_stale(const BookView& view) const {
+  return !view.waiting.empty() || !view.trouble.empty() || !view.last_night || is_overdue(view);
+}
+
+// What wants a person's attention, in words.
+std::vector<std::string> Answers::attention(const BookView& view) const {
+  std::vector<std::string> out = view.waiting;
+  if (!view.trouble.empty()) out.push_back(view.trouble);
+  if (view.waiting.empty() && is_overdue(view)) {
+    out.push_back("the closes of " + view.next_night->to_string() + " are due");
+  }
+  return out;
 }
 
 namespace {
@@ -76,13 +89,6 @@ http::Response json_response(const ordered_json& body) {
 
 http::Response no_book(const std::string& name) {
   return http::problem(404, "", "there is no book \"" + name + "\"; /v1/books lists them");
-}
-
-ordered_json attention(const BookView& view) {
-  ordered_json out = ordered_json::array();
-  for (const std::string& reason : view.waiting) out.push_back(reason);
-  if (!view.trouble.empty()) out.push_back(view.trouble);
-  return out;
 }
 
 // The members of `from` that have these names.
@@ -194,6 +200,7 @@ http::Response Answers::target(const BookView& view) const {
   ordered_json body;
   copy(night, body, {"book", "date", "verdict"});
   body["stale"] = is_stale(view);
+  body["attention"] = attention(view);
   copy(night, body, {"emitted", "wanted", "numerical_error"});
   body["held"] = night.at("held_after");
   copy(night, body,

@@ -37,7 +37,9 @@ class Answers {
   struct Reader;
 
   BookViewPointer find(const std::string& book) const;  // null where there is none
+  bool is_overdue(const BookView& view) const;
   bool is_stale(const BookView& view) const;
+  std::vector<std::string> attention(const BookView& view) const;
 
   http::Response books() const;
   http::Response book(const BookView& view) const;

@@ -1,10 +1,10 @@
 #include "daemon/runner/book_runner.h"
 
-#include <nlohmann/json.hpp>
 #include <utility>
 
 #include "daemon/night/record.h"
 #include "daemon/night/snapshot.h"
+#include "daemon/settings/settings.h"
 
 namespace nightweigh::runner {
 
@@ -12,35 +12,19 @@ namespace {
 
 constexpr const char* settings_kind = "settings";
 
-// What a book with nights cannot change: the name of the first such key that differs, or empty.
-std::string fixed_key_that_differs(const std::string& before, const std::string& now) {
-  const nlohmann::json old = nlohmann::json::parse(before), fresh = nlohmann::json::parse(now);
-  for (const char* key : {"start", "currency"}) {
-    if (old.at(key) != fresh.at(key)) return key;
-  }
-  const auto ids = [](const nlohmann::json& settings) {
-    std::vector<std::string> out;
-    for (const nlohmann::json& instrument : settings.at("instruments")) out.push_back(instrument.at("id"));
-    return out;
-  };
-  return ids(old) == ids(fresh) ? "" : "instruments";
-}
-
-// The book's `settings` entry of the journal agrees with the settings from here on.
-Result<store::JournalHead> settle_settings(const BookSettings& settings, store::Store& store,
-                                           bool has_nights) {
+// Whether the journal's newest `settings` entry says something else than the settings; an Error where a book
+// with nights cannot take the change.
+Result<bool> settings_differ(const BookSettings& settings, store::Store& store, bool has_nights) {
   Result<std::optional<store::JournalEntry>> newest = store.newest(settings.name, settings_kind);
   if (!newest) return failure(newest.error());
-  if (*newest && (*newest)->bytes == settings.resolved_text) return store.head(settings.name);
-  if (*newest && has_nights) {
-    const std::string key = fixed_key_that_differs((*newest)->bytes, settings.resolved_text);
-    if (!key.empty()) {
-      return failure({ErrorKind::bad_settings, "book " + settings.name + ", key " + key,
-                      "cannot change after the book's first night", "",
-                      "set it back, or start a new book under another name"});
-    }
-  }
-  return store.append(settings.name, settings_kind, settings.resolved_text);
+  if (!*newest) return true;
+  if ((*newest)->bytes == settings.resolved_text) return false;
+  const std::string key =
+      has_nights ? settings::fixed_key_that_differs((*newest)->bytes, settings.resolved_text) : "";
+  if (key.empty()) return true;
+  return failure({ErrorKind::bad_settings, "book " + settings.name + ", key " + key,
+                  "cannot change after the book's first night", "",
+                  "set it back, or start a new book under another name"});
 }
 
 }  // namespace
@@ -56,7 +40,10 @@ Result<std::unique_ptr<BookRunner>> BookRunner::open(std::shared_ptr<const BookS
   const std::string& name = book->settings_->name;
   Result<std::optional<store::Snapshot>> snapshot = store.snapshot(name);
   if (!snapshot) return failure(snapshot.error());
-  Result<store::JournalHead> head = settle_settings(*book->settings_, store, snapshot->has_value());
+  Result<bool> differ = settings_differ(*book->settings_, store, snapshot->has_value());
+  if (!differ) return failure(differ.error());
+  book->settings_are_new_ = *differ;
+  Result<store::JournalHead> head = store.head(name);
   if (!head) return failure(head.error());
   book->head_ = *head;
   if (!*snapshot) return book;
@@ -77,13 +64,32 @@ Result<std::unique_ptr<BookRunner>> BookRunner::open(std::shared_ptr<const BookS
   return book;
 }
 
+Result<void> BookRunner::enter_settings(store::Store& store) {
+  if (!settings_are_new_) return {};
+  Result<store::JournalHead> head = store.append(settings_->name, settings_kind, settings_->resolved_text);
+  if (!head) return failure(head.error());
+  head_ = *head;
+  settings_are_new_ = false;
+  return {};
+}
+
+// Closes of a date that is no trading day of this book belong to another book that holds the instrument.
+Result<std::optional<Date>> BookRunner::next_trading_day_with_closes(store::Store& store,
+                                                                     std::optional<Date> after) const {
+  for (;;) {
+    Result<std::optional<Date>> date =
+        store.next_date_with_closes(instruments_, after, settings_->start.date);
+    if (!date || !*date || settings_->calendar.is_trading_day(**date)) return date;
+    after = **date;
+  }
+}
+
 Result<BookRunner::Ready> BookRunner::ready_days(store::Store& store, std::size_t most) const {
   Ready ready;
   std::optional<Date> after = state_.last_night;
   while (ready.days.size() < most) {
     const Date earliest = after ? after->plus_days(1) : settings_->start.date;
-    Result<std::optional<Date>> with_closes =
-        store.next_date_with_closes(instruments_, after, settings_->start.date);
+    Result<std::optional<Date>> with_closes = next_trading_day_with_closes(store, after);
     if (!with_closes) return failure(with_closes.error());
     if (!*with_closes) return ready;  // nothing there: no wait worth a word
     const Date date = settings_->calendar.at_or_after(earliest).value_or(**with_closes);

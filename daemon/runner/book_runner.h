@@ -17,10 +17,14 @@ namespace nightweigh::runner {
 
 class BookRunner {
  public:
-  // Reads the book's journal and last state. Appends a `settings` entry where the resolved settings are new
-  // or have changed; refuses changes that a book with nights cannot take (start, instruments, currency).
+  // Reads the book's journal and last state and writes nothing. Refuses changed settings that a book with
+  // nights cannot take (start, instruments, currency).
   static Result<std::unique_ptr<BookRunner>> open(std::shared_ptr<const BookSettings> settings,
                                                   store::Store& store);
+
+  // Appends a `settings` entry where the resolved settings are new or have changed. Called when every book
+  // has been opened, so that a refused start leaves no trace.
+  Result<void> enter_settings(store::Store& store);
 
   const BookSettings& settings() const { return *settings_; }
   const std::vector<std::string>& instruments() const { return instruments_; }
@@ -59,11 +63,14 @@ class BookRunner {
 
  private:
   explicit BookRunner(std::shared_ptr<const BookSettings> settings);
+  Result<std::optional<Date>> next_trading_day_with_closes(store::Store& store,
+                                                           std::optional<Date> after) const;
 
   std::shared_ptr<const BookSettings> settings_;
   std::vector<std::string> instruments_;
   night::BookState state_;
   store::JournalHead head_;
+  bool settings_are_new_ = false;
   std::string night_bytes_;
   std::string rebuild_because_;
   std::vector<std::string> waiting_;

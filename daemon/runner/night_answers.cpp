@@ -1,5 +1,6 @@
 #include "daemon/runner/night_answers.h"
 
+#include <algorithm>
 #include <nlohmann/json.hpp>
 #include <utility>
 
@@ -14,7 +15,8 @@ namespace {
 // close, or at the next night's.
 json sheet_state(const json& night, const BookView& view) {
   if (night.at("sheet").is_null()) return {};
-  const bool filled = night.at("filled_sheet") == night.at("date") ||
+  const json& tonight = night.at("filled_sheets");
+  const bool filled = std::find(tonight.begin(), tonight.end(), night.at("date")) != tonight.end() ||
                       (view.last_night && view.last_night->to_string() > night.at("date").get<std::string>());
   return filled ? "closed" : "approved";
 }

@@ -39,6 +39,9 @@ Result<std::unique_ptr<Runner>> Runner::open(const std::vector<BookSettings>& bo
     runner->books_.push_back(std::move(*book));
   }
   for (const std::unique_ptr<BookRunner>& book : runner->books_) {
+    if (Result<void> entered = book->enter_settings(runner->parts_.store); !entered) {
+      return failure(entered.error());
+    }
     for (const std::string& instrument : book->instruments()) {
       runner->by_instrument_[instrument].push_back(book.get());
     }

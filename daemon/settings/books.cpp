@@ -100,6 +100,10 @@ void read_start_cash(const Value& cash, BookSettings& book, Problems& problems) 
     book.start.cash =
         read_decimal({&entry.value, path}, Decimal(), most, "from 0 to 999999999999999", problems)
             .value_or(Decimal());
+    if (const int units = minor_units(entry.key); book.start.cash.scale() > units) {
+      problems.add(entry.at, path, "is finer than the currency is paid in", book.start.cash.to_string(),
+                   "write at most " + std::to_string(units) + " digits after the point");
+    }
   }
 }
 

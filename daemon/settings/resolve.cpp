@@ -91,4 +91,17 @@ void resolve(BookSettings& book) {
   book.digest = sha256_hex(book.resolved_text);
 }
 
+std::string fixed_key_that_differs(const std::string& before, const std::string& now) {
+  const json old = json::parse(before), fresh = json::parse(now);
+  for (const char* key : {"start", "currency"}) {
+    if (old.at(key) != fresh.at(key)) return key;
+  }
+  const auto ids = [](const json& book) {
+    std::vector<std::string> out;
+    for (const json& instrument : book.at("instruments")) out.push_back(instrument.at("id"));
+    return out;
+  };
+  return ids(old) == ids(fresh) ? "" : "instruments";
+}
+
 }  // namespace nightweigh::settings

@@ -88,6 +88,28 @@ bool same_place(const Endpoint& a, const Endpoint& b) {
   return a.address == b.address && a.port == b.port && a.port != 0;
 }
 
+// Whether `folder` is `inner` or one of the folders above it. Links are followed where they exist.
+bool is_at_or_above(const std::filesystem::path& folder, const std::filesystem::path& inner) {
+  std::error_code ignored;
+  std::filesystem::path above = std::filesystem::weakly_canonical(folder, ignored);
+  if (!above.has_filename()) above = above.parent_path();  // "var/" is "var"
+  const std::filesystem::path below = std::filesystem::weakly_canonical(inner, ignored);
+  return std::mismatch(above.begin(), above.end(), below.begin(), below.end()).first == above.end();
+}
+
+// Files that lie in the drop folder are taken for deliveries and moved: it must hold nothing else.
+void read_drop_dir(const Value& value, ServiceSettings& out, const Context& context) {
+  const char* remedy = "write the folder for dropped files, or \"\" to switch it off";
+  const auto text = read_text(value, context.problems, remedy);
+  if (!text) return;
+  out.drop_dir = text->empty() ? std::filesystem::path() : (out.data_dir / *text).lexically_normal();
+  if (!out.drop_dir.empty() &&
+      (is_at_or_above(out.drop_dir, out.data_dir) || is_at_or_above(out.drop_dir, context.folder))) {
+    refuse(context.problems, value, "holds the service's own files, which would be taken for deliveries",
+           "name a folder of its own, like drop");
+  }
+}
+
 Endpoint tcp(std::uint16_t port) {
   Endpoint endpoint;
   endpoint.kind = Endpoint::Kind::tcp;
@@ -132,12 +154,7 @@ ServiceSettings read_service(MapReader service, const Context& context) {
     }
   }
   out.drop_dir = out.data_dir / "drop";
-  if (const auto value = service.optional("drop_dir")) {
-    const auto text =
-        read_text(*value, problems, "write the folder for dropped files, or \"\" to switch it off");
-    if (text)
-      out.drop_dir = text->empty() ? std::filesystem::path() : (out.data_dir / *text).lexically_normal();
-  }
+  if (const auto value = service.optional("drop_dir")) read_drop_dir(*value, out, context);
   service.accept_only("outbox_dir", OffValue::word(""));
   service.accept_only("tokens_file", OffValue::word(""));
   if (const auto value = service.optional("log_level")) {

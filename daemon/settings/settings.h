@@ -52,4 +52,8 @@ ResultOrErrors<Settings> parse(const std::string& text, const std::filesystem::p
 // Weights left out for constant_mix are written as the equal weights that they stand for.
 void resolve(BookSettings& book);
 
+// What a book with nights cannot change (start, currency, instruments): the first such key that differs
+// between two resolved texts of a book, or empty.
+std::string fixed_key_that_differs(const std::string& before, const std::string& now);
+
 }  // namespace nightweigh::settings

@@ -382,7 +382,8 @@ def repeated_and_misordered(bench):
     bench.feed_good("first of two")
     before = bench.state()
     known = {"status": "known", "rows": 0, "errors": [],
-             "books": [{"book": "harbour", "result": "waiting", "dates": [], "reasons": []}]}
+             "books": [{"book": "harbour", "result": "waiting", "dates": [],
+                        "reasons": [f"nothing new: the next night is {DAYS[bench.at]}"]}]}
     for name, again in (("sent twice", line), ("the same rows in other bytes", line.replace(",", " , "))):
         answer = bench.feeder.send(again)
         checks.equal(answer.pop("digest"), digest_of(again.encode()), f"{name} by socket: the digest")

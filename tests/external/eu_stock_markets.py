@@ -42,7 +42,7 @@ import shutil
 import subprocess
 import sys
 import tempfile
-from decimal import ROUND_DOWN, ROUND_HALF_EVEN, Decimal, getcontext
+from decimal import ROUND_DOWN, ROUND_FLOOR, ROUND_HALF_EVEN, Decimal, getcontext
 
 import numpy as np
 
@@ -123,11 +123,11 @@ class Account:
             self.positions[name] += quantity
         self.rows.append((cause, name, quantity, cash))
 
-    # price = close * (1 +- half spread); what it brings and its commission rounded half to even, each by itself.
+    # price = close * (1 +- half spread); what it brings is rounded against the book, its commission half to even.
     @staticmethod
     def cash_of(quantity, close):
         price = close * (1 + (HALF_SPREAD if quantity > 0 else -HALF_SPREAD))
-        return half_even(-quantity * price), half_even(abs(quantity) * close * COMMISSION)
+        return (-quantity * price).quantize(CENT, rounding=ROUND_FLOOR), half_even(abs(quantity) * close * COMMISSION)
 
     def trade(self, name, quantity, close):
         proceeds, commission = self.cash_of(quantity, close)

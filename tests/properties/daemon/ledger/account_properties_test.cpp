@@ -40,6 +40,13 @@ Rational to_cents(const Rational& value) {
   return Rational(below, 100);
 }
 
+Rational floor_to_cents(const Rational& value) {
+  const Rational scaled = value * 100;
+  Integer below = numerator(scaled) / denominator(scaled);
+  if (scaled < 0 && Rational(below) != scaled) below -= 1;
+  return Rational(below, 100);
+}
+
 Decimal number(std::int64_t low, std::int64_t high, int scale) {
   return Decimal::scaled(*rc::gen::inRange<std::int64_t>(low, high), scale);
 }
@@ -93,7 +100,7 @@ TEST_CASE("random events: the account is what exact fractions say, and the books
           apply_trade(now, rows, line, quantity, terms);
           const Rational side = quantity.is_negative() ? -1 : 1;
           const Rational q = exact(quantity), close = exact(closes[line]);
-          cash += to_cents(-q * close * (1 + side * exact(terms.half_spread)));
+          cash += floor_to_cents(-q * close * (1 + side * exact(terms.half_spread)));
           cash -= to_cents(side * q * close * exact(terms.commission));
           quantities[line] += q;
         }
@@ -121,8 +128,10 @@ TEST_CASE("buying and selling the same returns the cash but for the costs") {
     const Rational value = exact(quantity) * exact(terms.close);
     const Rational costs = 2 * value * (exact(terms.half_spread) + exact(terms.commission));
     const Rational off = exact(cash_before) - exact(account.cash) - costs;
-    RC_ASSERT(abs(off) <= Rational(2, 100));  // four roundings of at most half a cent
-    if (terms.half_spread.is_zero() && terms.commission.is_zero()) RC_ASSERT(account.cash == cash_before);
+    // Two roundings against the book of less than a cent, two of commissions of at most half a cent.
+    RC_ASSERT(off >= Rational(-1, 100));
+    RC_ASSERT(off < Rational(3, 100));
+    RC_ASSERT(account.cash <= cash_before);
   }));
 }
 

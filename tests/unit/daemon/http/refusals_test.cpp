@@ -423,3 +423,22 @@ TEST_CASE("a request may arrive byte by byte") {
   REQUIRE(answer);
   CHECK(answer->body == R"({"head":"abc","length":3})");
 }
+
+TEST_CASE("an io_context that ends without stop() takes connections in any state with it") {
+  boost::asio::io_context io;
+  ServerSettings settings;
+  settings.address = "127.0.0.1";
+  Result<std::unique_ptr<Server>> server = Server::open(io, settings, sample_handler());
+  REQUIRE(server);
+  (*server)->start();
+  const std::string endpoint = (*server)->endpoint();
+  std::thread thread([&io] { io.run(); });
+  RawClient silent(endpoint), idle(endpoint), busy(endpoint);
+  idle.send("GET /hello HTTP/1.1\r\nHost: " + endpoint + "\r\n\r\n");
+  CHECK(idle.read_answer());
+  busy.send("GET /slow HTTP/1.1\r\nHost: " + endpoint + "\r\n\r\n");
+  std::this_thread::sleep_for(std::chrono::milliseconds(50));
+  io.stop();
+  thread.join();
+  server->reset();
+}

@@ -38,11 +38,12 @@ TEST_CASE("a trade's cash: worked by hand") {
     CHECK(cash.commission == dec("1.22"));
     CHECK(cash.total() == dec("6116.94"));
   }
-  SUBCASE("halves go to the even minor unit, on either side of 0") {
-    CHECK(trade_cash(dec("1"), terms("0.125", "0", "0")).proceeds == dec("-0.12"));
-    CHECK(trade_cash(dec("1"), terms("0.135", "0", "0")).proceeds == dec("-0.14"));
-    CHECK(trade_cash(dec("-1"), terms("0.125", "0", "0")).proceeds == dec("0.12"));
-    CHECK(trade_cash(dec("-1"), terms("0.135", "0", "0")).proceeds == dec("0.14"));
+  SUBCASE("what a trade brings is rounded against the book; its commission half to even") {
+    CHECK(trade_cash(dec("1"), terms("0.125", "0", "0")).proceeds == dec("-0.13"));
+    CHECK(trade_cash(dec("1"), terms("0.121", "0", "0")).proceeds == dec("-0.13"));
+    CHECK(trade_cash(dec("1"), terms("0.12", "0", "0")).proceeds == dec("-0.12"));
+    CHECK(trade_cash(dec("-1"), terms("0.129", "0", "0")).proceeds == dec("0.12"));
+    CHECK(trade_cash(dec("-1"), terms("0.13", "0", "0")).proceeds == dec("0.13"));
     CHECK(trade_cash(dec("1"), terms("0.12500000001", "0", "0")).proceeds == dec("-0.13"));
     CHECK(trade_cash(dec("1"), terms("100", "0", "0.00005")).commission == dec("0"));
     CHECK(trade_cash(dec("1"), terms("300", "0", "0.00005")).commission == dec("0.02"));
@@ -50,10 +51,11 @@ TEST_CASE("a trade's cash: worked by hand") {
   SUBCASE("the currency's minor unit: none for yen, three for dinars (ISO 4217)") {
     CHECK(trade_cash(dec("3"), terms("1234.5", "0", "0.001", 0)).proceeds == dec("-3704"));  // 3703.5
     CHECK(trade_cash(dec("3"), terms("1234.5", "0", "0.001", 0)).commission == dec("4"));    // 3.7035
-    CHECK(trade_cash(dec("1"), terms("1.2345", "0", "0", 3)).proceeds == dec("-1.234"));
+    CHECK(trade_cash(dec("1"), terms("1.2345", "0", "0", 3)).proceeds == dec("-1.235"));
   }
   SUBCASE("fractions of a share") {
-    CHECK(trade_cash(dec("0.00000001"), terms("61.20", "0", "0")).proceeds.is_zero());
+    CHECK(trade_cash(dec("0.00000001"), terms("61.20", "0", "0")).proceeds == dec("-0.01"));
+    CHECK(trade_cash(dec("-0.00000001"), terms("61.20", "0", "0")).proceeds.is_zero());
     CHECK(trade_cash(dec("16.33986928"), terms("61.2", "0", "0")).proceeds == dec("-1000"));  // 999.999999936
   }
 }

@@ -63,7 +63,7 @@ TEST_CASE("lag 1: the sheet is filled at the next night's close, before marking"
   CHECK(second.evidence.relatives == std::vector<double>{1.1, 1.0});
   CHECK(second.evidence.held_before == std::vector<double>{0, 1});
   CHECK(second.evidence.held_after == std::vector<double>{0.55, 0.45});
-  CHECK(second.evidence.filled_sheet == day("2025-01-02"));
+  CHECK(second.evidence.filled_sheets == std::vector<Date>{day("2025-01-02")});
   CHECK(second.evidence.value_before_fills == dec("1000000"));
   CHECK(second.evidence.value_after == dec("1000000"));
   CHECK(second.evidence.cost_paid == 0.0);
@@ -89,7 +89,7 @@ TEST_CASE("lag 0: the sheet is filled at its own close, after sizing") {
   const Night first = desk.night("2025-01-02", {{"100", "", ""}});
   CHECK(first.evidence.held_before == std::vector<double>{0, 1});
   CHECK(first.evidence.held_after == std::vector<double>{0.5, 0.5});
-  CHECK(first.evidence.filled_sheet == day("2025-01-02"));
+  CHECK(first.evidence.filled_sheets == std::vector<Date>{day("2025-01-02")});
   CHECK_FALSE(first.after.pending);
 
   const Night second = desk.night("2025-01-03", {{"110", "", ""}});
@@ -328,7 +328,7 @@ TEST_CASE("halted: learned and marked, but no sheet; resumed: as if nothing had 
   Desk pending(harbour());
   pending.night("2025-01-02", quotes);
   const Night filled = pending.night("2025-01-03", quotes, {Halt{"a", "b"}});
-  CHECK(filled.evidence.filled_sheet == day("2025-01-02"));
+  CHECK(filled.evidence.filled_sheets == std::vector<Date>{day("2025-01-02")});
 }
 
 TEST_CASE("reserve and cash in the mix") {

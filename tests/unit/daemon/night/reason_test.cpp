@@ -75,8 +75,8 @@ TEST_CASE("reason: a night that stays names the nearest line, its band, and the 
   CHECK(form.rfind("stay. Held ", 0) == 0);
   CHECK(has(form, " # %, wanted # %, no trade between # and #. It is the nearest line, "));
   CHECK((has(form, "# of the way to its edge; ") || has(form, "just inside its edge; ")));
-  CHECK(has(form, "with the other closes unchanged, a close of "));
-  CHECK(has(form, " at # would move it. The verdict would be "));
+  CHECK(has(form, "with all else unchanged, a close of "));
+  CHECK(has(form, " near # would move it. The verdict would be "));
   CHECK(form.substr(form.size() - 8) == "doubled.");
 }
 
@@ -86,7 +86,7 @@ TEST_CASE("reason: the close that it names moves the line, and a little less doe
   int asked = 0;
   for (const char* start : {"61.90", "62.40", "63.00", "60.30", "59.90", "59.00"}) {
     const Night night = bench.with(start);
-    const std::optional<double> close = number_after(night.evidence.reason, "a close of ALDER at ");
+    const std::optional<double> close = number_after(night.evidence.reason, "a close of ALDER near ");
     if (night.evidence.verdict != Verdict::stay || !close) continue;
     ++asked;
     const double named = *close, from = std::stod(start);

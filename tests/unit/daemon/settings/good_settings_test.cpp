@@ -99,7 +99,7 @@ books:
     currency: USD
     time_zone: America/New_York
     instruments: [7.B_X-1, ALDER]
-    start: {date: 2024-02-29, cash: {USD: 12.345}, holdings: {7.B_X-1: "0.00000001", ALDER: "7"}}
+    start: {date: 2024-02-29, cash: {USD: 12.34}, holdings: {7.B_X-1: "0.00000001", ALDER: "7"}}
     calendar: any
     cash: {in_mix: true, yearly_rate: -0.005}
     strategy: {rule: constant_mix, weights: {CASH: 0.2, ALDER: 0.3, 7.B_X-1: 0.5}}
@@ -121,7 +121,7 @@ books:
   CHECK(book.instruments[0].is_fractional());
   CHECK(book.instruments[1].isin == "XX0000ALDER0");
   CHECK(book.instruments[1].mic == "XXXX");
-  CHECK(book.start.cash.to_string() == "12.345");
+  CHECK(book.start.cash.to_string() == "12.34");
   CHECK(book.start.holdings.at("7.B_X-1").to_string() == "0.00000001");
   CHECK(book.start.holdings.at("ALDER") == Decimal(7));  // an odd lot
   CHECK(book.calendar.any);
