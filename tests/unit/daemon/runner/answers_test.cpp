@@ -148,7 +148,8 @@ TEST_CASE("log rows have the members of the contract; verdict and dates filter")
                           "horizon_days", "turnover", "lines", "sheet", "reviewed_by", "batch", "hash"}) {
     CHECK_MESSAGE(page["rows"][0].contains(key), key);
   }
-  for (const json& row : reader.ok("/v1/books/harbour/log", {{"verdict", "move"}})["rows"]) {
+  const json moves = reader.ok("/v1/books/harbour/log", {{"verdict", "move"}});
+  for (const json& row : moves["rows"]) {
     CHECK(row["verdict"] == "move");
     CHECK(row["sheet"].is_string());
     CHECK(row["lines"] > 0);

@@ -228,6 +228,33 @@ TEST_CASE("start, currency and instruments are fixed after the first night, and 
   CHECK(started.error().message().find("key start") != std::string::npos);
 }
 
+TEST_CASE("a refused start leaves no journal entry of any book") {
+  Desk desk({book("harbour"), book("meadow")});
+  desk.whole_day("2025-01-02");
+  const std::string head = desk.head("harbour");
+  desk.books()[0].strategy.eta = 0.1;     // may change
+  desk.books()[1].start.cash = dec("1");  // may not
+  for (BookSettings& settings : desk.books()) resolve(settings);
+  CHECK_FALSE(desk.try_start());
+  const Result<std::unique_ptr<store::Store>> reader =
+      store::Store::open(desk.folder().database(), store::Store::Mode::read);
+  REQUIRE(reader);
+  CHECK((*reader)->head("harbour")->hash == head);
+}
+
+TEST_CASE("closes of a day that is none of the book's make it neither wait nor stale") {
+  BookSettings free = book("free");
+  free.calendar.any = true;
+  Desk desk({book("weekdays"), free});
+  desk.whole_day("2025-01-02");
+  desk.whole_day("2025-01-03");
+  const feed::Acknowledgement answer = desk.whole_day("2025-01-04");  // a Saturday, a night of `free` alone
+  REQUIRE(answer.books.size() == 2);
+  CHECK(answer.books[1].dates.size() == 1);
+  CHECK(desk.view("weekdays").waiting.empty());
+  CHECK(desk.whole_day("2025-01-06").books[0].dates == std::vector<Date>{day("2025-01-06")});
+}
+
 TEST_CASE("after a stop request no night begins; the next start goes on") {
   const std::vector<std::string> batches = invented_days(40);
   std::string all;
