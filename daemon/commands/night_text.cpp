@@ -107,11 +107,11 @@ std::string night_text(const json& night) {
     text += " " + currency + ", of it cash " + cash.get<std::string>();
   text += "\nWealth since the start: net of costs " + number(night["wealth_net"], 6) + ", frictionless " +
           number(night["wealth_frictionless"], 6) + "\n";
-  text += "Rule " + night["strategy"]["rule"].get<std::string>() + " after " +
-          std::to_string(night["strategy"]["days"].get<long>()) + " learned days; settings " +
-          fixed(night["settings"], 12) + "; numerics " +
-          std::to_string(night["numerics"]["version"].get<int>()) + " (" +
-          night["numerics"]["profile"].get<std::string>() + ")\n";
+  text += wrapped("Rule " + night["strategy"]["rule"].get<std::string>() + " after " +
+                  std::to_string(night["strategy"]["days"].get<long>()) + " learned days; settings " +
+                  fixed(night["settings"], 12) + "; numerics " +
+                  std::to_string(night["numerics"]["version"].get<int>()) + " (" +
+                  night["numerics"]["profile"].get<std::string>() + ")");
   if (night.contains("hash")) {
     text += "Journal entry " + std::to_string(night["sequence"].get<long>()) + ", hash " +
             night["hash"].get<std::string>() + "\n";
