@@ -27,10 +27,10 @@ std::string_view name_of(Cause cause) {
 
 namespace {
 
-void book(Account& account, std::vector<Row>& rows, Row row) {
+void book(Account& account, std::vector<Row>& rows, const Row& row) {
   account.cash += row.cash;
   if (row.line) account.quantities[*row.line] += row.quantity;
-  rows.push_back(std::move(row));
+  rows.push_back(row);
 }
 
 }  // namespace

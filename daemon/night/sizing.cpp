@@ -84,7 +84,7 @@ SizedMove size_move(const ledger::Account& account, const std::vector<double>& h
     sized.traded_value += order.quantity * order.reference_close;
     ledger::apply_trade(sized.account_after, rows, draft.line, draft.quantity,
                         trade_terms(settings, draft.line, prices[draft.line]));
-    sized.orders.push_back(std::move(order));
+    sized.orders.push_back(order);
   }
   return sized;
 }

@@ -136,7 +136,8 @@ std::variant<store::LogFilter, std::string> log_filter(const http::Request& requ
 std::string next_link(const http::Request& request, const std::string& cursor) {
   std::string query;
   for (const auto& [name, value] : request.query) {
-    if (name != "cursor") query += name + "=" + value + "&";  // all checked: nothing to encode
+    if (name != "cursor")
+      query.append(name).append("=").append(value).append("&");  // checked: nothing to encode
   }
   return "<" + request.path + "?" + query + "cursor=" + cursor + ">; rel=\"next\"";
 }
