@@ -1,7 +1,6 @@
 #include "daemon/ledger/account.h"
 
 #include <stdexcept>
-#include <utility>
 
 namespace nightweigh::ledger {
 
